@@ -1,0 +1,1 @@
+"""The command line: arguments, progress, tables, exit statuses. The work is done by `perdure._pipeline`."""

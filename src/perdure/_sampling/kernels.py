@@ -1,0 +1,65 @@
+"""From a case to its compiled burst kernel."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+
+from perdure._kernels.cache import burst_kernel
+from perdure._kernels.generate import KernelSpec
+from perdure._records import CaseRecord, Floats
+from perdure.errors import CaseError
+
+__all__ = ["kernel_for", "parameter_values", "scheme_of"]
+
+
+def scheme_of(case: CaseRecord) -> str:
+    """Time-stepping scheme: as given, else the usual one of the kind."""
+    usual = {"map": "map", "noisy-map": "map", "flow": "rk4", "noisy-flow": "weak2"}
+    return case.bursts.scheme or usual[case.system.kind]
+
+
+def parameter_values(case: CaseRecord) -> Floats:
+    """Values in the order of the kernel, shape (n_parameter,), at least one."""
+    values = [p.value for p in case.system.parameters.values()]
+    return np.array(values or [0.0])
+
+
+def kernel_spec(case: CaseRecord) -> KernelSpec:
+    system = case.system
+    return KernelSpec(
+        scheme=scheme_of(case),
+        state=system.state,
+        parameters=tuple(system.parameters),
+        drift=tuple(e.source for e in system.equations),
+        noise=tuple(tuple((e.source, e.names) for e in row) for row in system.noise),
+        draws=system.draws,
+        events=tuple(e.condition.source for e in case.events),
+        observables=tuple(o.expression.source for o in case.observables),
+        function=system.function,
+        noise_function=system.noise_function,
+    )
+
+
+def kernel_for(case: CaseRecord) -> tuple[Callable[..., int], int]:
+    """The compiled kernel, and the number of its sums.
+
+    Raises
+    ------
+    CaseError
+        A Python function that numba cannot compile.
+    """
+    spec = kernel_spec(case)
+    try:
+        return burst_kernel(spec), spec.n_sum
+    except TypeError as error:
+        raise CaseError(
+            f"{case.source_name}, system function: numba could not compile it; allowed: a function of floats that "
+            f"returns a float or a tuple of floats, in numba's part of Python; numba says: {first_lines(str(error))}"
+        ) from error
+
+
+def first_lines(text: str) -> str:
+    lines = [line.strip() for line in text.splitlines() if line.strip()]
+    return " / ".join(lines[:6])

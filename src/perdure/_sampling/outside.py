@@ -1,0 +1,100 @@
+"""The outside state: bursts that left the domain are followed until they come back.
+
+The outside cannot be seeded uniformly. A fixed number of particles is kept there instead: each sweep flies all of
+them for one burst; those that come back are replaced by fresh exits, drawn from the bursts that left the domain with
+the stationary mass of their cells as weight. In the long run the particles have the law of the invariant measure
+outside, and their rows, pooled over the later sweeps, are the row of the outside state.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from perdure._kernels.rows import OUTSIDE
+from perdure._records import Exits, Floats, Integers
+from perdure._sampling.bursts import BlockRows, BurstSampler
+
+__all__ = ["OutsideRow", "outside_row"]
+
+PARTICLES = 8192
+SWEEPS, DROPPED = 24, 8
+
+
+@dataclass(frozen=True)
+class OutsideRow:
+    """Row of the outside state.
+
+    Attributes
+    ----------
+    row : BlockRows
+        One row, pooled over the sweeps kept.
+    n_burst : int
+        Bursts pooled.
+    settled : bool
+        False if excursions still lengthened: the part of particles that stay outside differed between the two
+        halves of the kept sweeps by more than five standard errors and one percent of those that come back.
+    """
+
+    row: BlockRows
+    n_burst: int
+    settled: bool
+
+
+def outside_row(
+    sampler: BurstSampler, exits: Exits, known: Integers, weight: Floats, rng: np.random.Generator
+) -> OutsideRow:
+    """Fly the particles; weight (n_exit,) is the mass that each exit stands for, `known` the keys of the cover."""
+    n_rep = sampler.plan.n_replicate
+    size = PARTICLES // n_rep
+    key, first = np.array([OUTSIDE]), np.array([0, size * n_rep], dtype=np.int64)
+    weight = weight if weight.sum() > 0.0 else np.ones_like(weight)
+    pools = [np.flatnonzero(exits.replicate == r) for r in range(n_rep)]
+    staying: list[Floats] = [np.zeros((len(exits.point), 0)) for _ in range(n_rep)]
+    rows, stay = [], []
+    for sweep in range(SWEEPS):
+        state = np.empty((len(exits.point), size * n_rep))
+        for r in range(n_rep):
+            pool = pools[r] if len(pools[r]) else np.arange(len(weight))
+            chance = weight[pool] if weight[pool].sum() > 0.0 else np.ones(len(pool))
+            fresh = rng.choice(pool, size - staying[r].shape[1], p=chance / chance.sum())
+            state[:, r * size : (r + 1) * size] = np.concatenate([staying[r], exits.point[:, fresh]], axis=1)
+        block = sampler.fly(key, first, state, sweep + 1)
+        burst, point = sampler.strays(state, known)
+        staying = [point[:, burst // size == r] for r in range(n_rep)]
+        stay.append(len(burst) / (size * n_rep))
+        if sweep >= DROPPED:
+            rows.append(block)
+    half = len(rows) // 2
+    early, late = np.mean(stay[DROPPED : DROPPED + half]), np.mean(stay[DROPPED + half :])
+    error = np.sqrt(late * (1.0 - late) * 2.0 / (half * size * n_rep))
+    settled = bool(abs(late - early) <= 5.0 * error + 0.01 * (1.0 - late))
+    return OutsideRow(pooled(rows), len(rows) * size * n_rep, settled)
+
+
+def pooled(rows: list[BlockRows]) -> BlockRows:
+    """One-cell rows added up."""
+    target, count = added([(row.target, row.count) for row in rows])
+    slot, slot_count = added([(row.slot, row.slot_count) for row in rows])
+    return replace(
+        rows[-1],
+        pointer=np.array([0, len(target)]),
+        target=target,
+        count=count,
+        sums=np.sum([row.sums for row in rows], axis=0),
+        slot_pointer=np.array([0, len(slot)]),
+        slot=slot,
+        slot_count=slot_count,
+        n_blown=sum(row.n_blown for row in rows),
+    )
+
+
+def added(parts: list[tuple[NDArray[np.generic], NDArray[np.generic]]]) -> tuple[Integers, NDArray[np.uint32]]:
+    """Counts summed by name, names ascending."""
+    names = np.concatenate([name for name, _ in parts])
+    unique, at = np.unique(names, return_inverse=True)
+    total = np.zeros((len(unique), parts[0][1].shape[1]), dtype=np.uint32)
+    np.add.at(total, at, np.concatenate([count for _, count in parts]).astype(np.uint32))
+    return unique, total

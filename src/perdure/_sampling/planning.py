@@ -1,0 +1,161 @@
+"""From the options of a case and the findings of the pilot to the plan of a run."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from perdure._records import BoxGrid, BurstOptions, CaseRecord, CellOptions, Floats, Integers, Plan, System
+from perdure._sampling.pilot import Flight, Pilot, burst_length, time_step
+
+__all__ = ["Domain", "boxes_per_axis", "domain", "make_plan"]
+
+# Boxes along an axis, by dimension, when nothing is given.
+AXIS_BOXES = {1: 1024, 2: 192, 3: 72, 4: 28, 5: 16, 6: 11}
+# Steps and bursts that a run may spend when nothing is given, and bounds on the bursts of a cell.
+STEP_BUDGET, BURST_BUDGET = 1.2e9, 4e6
+FEWEST, MOST = 32, 4096
+# A range this many times that of the middle 99 percent of the states is one of heavy tails.
+HEAVY = 4.0
+# From this many cells on, their number gives the error bar its degrees of freedom: two replicates a cell do.
+MANY_CELLS = 4096
+
+
+@dataclass(frozen=True)
+class Domain:
+    """Where boxes are laid.
+
+    Attributes
+    ----------
+    lower, upper : ndarray, shape (n_dim,)
+        Ends of the domain. Units of the state.
+    given : ndarray of bool, shape (n_dim, 2)
+        Ends that the case gives.
+    closed : ndarray of bool, shape (n_dim, 2)
+        Ends beyond which states are outside: those given, and those of components with heavy tails.
+    """
+
+    lower: Floats
+    upper: Floats
+    given: NDArray[np.bool_]
+    closed: NDArray[np.bool_]
+
+
+def domain(system: System, cells: CellOptions, pilot: Pilot) -> Domain:
+    """Ends from the case, else from the pilot.
+
+    Nothing is added to the range of the pilot: of many maps the long run ends sharply, and what lies beyond leads
+    away. Of a component with heavy tails only the middle 99 percent and half of its range on either side is cut
+    into boxes; the rest is the outside state.
+    """
+    low, high = pilot.points.min(axis=1), pilot.points.max(axis=1)
+    bulk_low, bulk_high = np.quantile(pilot.points, [0.005, 0.995], axis=1)
+    heavy = high - low > HEAVY * (bulk_high - bulk_low)
+    heavy &= bulk_high > bulk_low
+    spare = 0.5 * (bulk_high - bulk_low)
+    low, high = np.where(heavy, bulk_low - spare, low), np.where(heavy, bulk_high + spare, high)
+    still = high - low <= 1e-9 * np.maximum(np.abs(low), np.abs(high))
+    half = np.where(still, 5e-3 * np.maximum(1.0, np.abs(high)), 0.0)
+    lower = np.array([cells.lower.get(s, v) for s, v in zip(system.state, low - half, strict=True)])
+    upper = np.array([cells.upper.get(s, v) for s, v in zip(system.state, high + half, strict=True)])
+    given = np.array([[s in cells.lower, s in cells.upper] for s in system.state])
+    return Domain(lower, upper, given, given | heavy[:, None])
+
+
+def boxes_per_axis(system: System, cells: CellOptions, pilot: Pilot) -> tuple[Integers, str]:
+    """Boxes between lower and upper on each axis, shape (n_dim,), and the reason."""
+    n_dim = len(system.state)
+    usual = AXIS_BOXES.get(n_dim, 8)
+    if pilot.at_rest:
+        # a fixed point in the middle of a symmetric range must not lie on an edge between two boxes
+        usual -= 1
+    reason = f"{usual} per axis in {n_dim} dimension{'s' if n_dim > 1 else ''}"
+    if cells.count is not None:
+        usual = max(1, round(cells.count ** (1.0 / n_dim)))
+        reason = "from [cells] count"
+    return np.array([cells.counts.get(s, usual) for s in system.state], dtype=np.int64), reason
+
+
+def bursts_per_cell(bursts: BurstOptions, n_cell: int, n_step: int) -> tuple[int, int, str]:
+    """Bursts per cell, replicates, and the reason."""
+    n_replicate = 2 if n_cell >= MANY_CELLS else 8
+    if bursts.per_cell is not None:
+        per_cell = bursts.per_cell
+        while per_cell % n_replicate or per_cell // n_replicate < 2:
+            n_replicate //= 2
+            if n_replicate < 2:
+                # an odd number of bursts: one more makes two equal replicates
+                per_cell, n_replicate = per_cell + per_cell % 2, 2
+                break
+        return per_cell, n_replicate, ""
+    share = min(STEP_BUDGET / n_step, BURST_BUDGET) / n_cell
+    per_cell = int(2 ** np.floor(np.log2(np.clip(share, FEWEST, MOST))))
+    return per_cell, n_replicate, f"at most {STEP_BUDGET:g} steps and {BURST_BUDGET:g} bursts in all, between {FEWEST} and {MOST} per cell"
+
+
+def burst_and_step(
+    case: CaseRecord, pilot: Pilot, flight: Flight, width: Floats, scheme: str
+) -> tuple[float, int, dict[str, str]]:
+    """Time step, steps per burst, and the reasons of what was found."""
+    system, options, found = case.system, case.bursts, dict[str, str]()
+    if not system.is_flow:
+        if options.steps is not None:
+            return 1.0, options.steps, found
+        length, why = burst_length(flight, pilot, system.is_noisy)
+        n_step = max(1, round(length))
+        found["burst length"] = why
+        return 1.0, n_step, found
+    duration = options.duration
+    if duration is None:
+        duration, found["burst length"] = burst_length(flight, pilot, system.is_noisy)
+        if options.step is not None:
+            duration = max(duration, options.step)
+    if options.step is not None:
+        n_step = max(1, round(duration / options.step))
+        return duration / n_step, n_step, found
+    step, n_step, found["time step"] = time_step(flight, pilot, duration, width, system.is_noisy, scheme)
+    return step, n_step, found
+
+
+def make_plan(
+    case: CaseRecord,
+    pilot: Pilot,
+    flight: Flight,
+    scheme: str,
+    grid: BoxGrid,
+    ends: Domain,
+    visited: tuple[Integers, Integers],
+    found: Mapping[str, str],
+) -> Plan:
+    """Plan of the run; `visited` are the cells of the pilot's points and their numbers, `found` the reasons so far."""
+    seed_keys, n_point = visited
+    step, n_step, more = burst_and_step(case, pilot, flight, grid.width, scheme)
+    reasons = dict(found) | more
+    per_cell, n_replicate, why = bursts_per_cell(case.bursts, len(seed_keys), n_step)
+    if why:
+        reasons["bursts per cell"] = why
+    return Plan(
+        grid=grid,
+        bounded=bool(ends.closed.any()),
+        seed_keys=seed_keys,
+        seed_share=n_point / pilot.points.shape[1],
+        step=step,
+        n_step=n_step,
+        per_cell=per_cell,
+        n_replicate=n_replicate,
+        stride=max(1, n_step // 8),
+        scheme=scheme,
+        axis_lower=ends.lower,
+        axis_upper=ends.upper,
+        found=reasons,
+        pilot={
+            "starts": pilot.n_start,
+            "kept": pilot.n_kept,
+            "points": pilot.points.shape[1],
+            "rate": pilot.rate,
+            "cells": len(seed_keys),
+        },
+    )

@@ -1,0 +1,137 @@
+"""Rows arrive block by block in the order of discovery and leave as one tally in the order of the keys."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any, Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from perdure._kernels.assemble import place_rows
+from perdure._records import Floats, Integers, Plan, SlotRows, Tally
+
+__all__ = ["Collected", "RowStore", "with_outside"]
+
+
+class Rows(Protocol):
+    """What `RowStore` keeps of a block."""
+
+    @property
+    def pointer(self) -> Integers: ...
+    @property
+    def count(self) -> NDArray[Any]: ...
+    @property
+    def sums(self) -> Floats: ...
+    @property
+    def slot_pointer(self) -> Integers: ...
+    @property
+    def slot(self) -> NDArray[Any]: ...
+    @property
+    def slot_count(self) -> NDArray[Any]: ...
+
+
+@dataclass(frozen=True)
+class Collected:
+    """All rows, in the order of the keys.
+
+    Attributes
+    ----------
+    tally : Tally
+    sums : ndarray, shape (n_cell, n_replicate, n_sum)
+    slots : SlotRows
+    """
+
+    tally: Tally
+    sums: Floats
+    slots: SlotRows
+
+
+class RowStore:
+    """Keeps finished blocks compactly until all rows are there."""
+
+    def __init__(self, n_replicate: int) -> None:
+        self.n_replicate = n_replicate
+        self._rows: list[tuple[Integers, NDArray[Any], NDArray[Any]]] = []
+        self._slots: list[tuple[Integers, NDArray[Any], NDArray[Any]]] = []
+        self._sums: list[Floats] = []
+
+    def add(self, block: Rows, column: NDArray[np.int32]) -> None:
+        """Take a block whose targets were numbered as `column` (in the order of discovery)."""
+        self._rows.append((block.pointer, column, block.count))
+        self._slots.append((block.slot_pointer, block.slot, block.slot_count))
+        self._sums.append(block.sums)
+
+    def finish(self, order: Integers, plan: Plan, n_interval: int, n_known: int) -> Collected:
+        """Everything in a new order; the store is empty afterwards.
+
+        `order[k]` is the number, by discovery, of the cell that comes k-th. Of the `n_known` cells that were named
+        those beyond `len(order)` were sent no bursts: they count as outside.
+        """
+        n = len(order)
+        rank = np.full(n_known + 2, n, dtype=np.int32)
+        rank[order] = np.arange(n, dtype=np.int32)
+        rank[-1] = n + 1
+        slot_type = self._slots[0][1].dtype
+        pointer, column, count = joined(self._rows, rank[:n], rank, np.int32, self.n_replicate, ascending=True)
+        slots = joined(self._slots, rank[:n], None, slot_type, self.n_replicate, ascending=False)
+        sums = np.concatenate(self._sums)[order]
+        self._sums = []
+        bursts = np.full((n, self.n_replicate), plan.per_cell // self.n_replicate, dtype=np.int64)
+        tally = Tally(pointer, column, count, bursts)
+        return Collected(tally, sums, SlotRows(*slots, plan.n_step // plan.stride, n_interval))
+
+
+def with_outside(collected: Collected, row: Rows, column: NDArray[np.int32], n_burst: int) -> Collected:
+    """The outside state becomes the last cell, with a row of its own.
+
+    `column` numbers the targets of the row as in the tally (n_cell: outside again, n_cell + 1: blown up); `n_burst`
+    is the number of its bursts. Columns of blown-up bursts move on by one.
+    """
+    tally, slots = collected.tally, collected.slots
+    n, n_rep = tally.bursts.shape
+
+    def renamed(names: NDArray[np.int32]) -> NDArray[np.int32]:
+        return np.where(names == n + 1, n + 2, names).astype(np.int32)
+
+    grown = Tally(
+        np.append(tally.pointer, tally.pointer[-1] + len(column)),
+        np.concatenate([renamed(tally.column), renamed(column)]),
+        np.concatenate([tally.count, row.count]),
+        np.concatenate([tally.bursts, np.full((1, n_rep), n_burst // n_rep)]),
+    )
+    more = SlotRows(
+        np.append(slots.pointer, slots.pointer[-1] + len(row.slot)),
+        np.concatenate([slots.column, row.slot]),
+        np.concatenate([slots.count, row.slot_count]),
+        slots.n_sample,
+        slots.n_interval,
+    )
+    return Collected(grown, np.concatenate([collected.sums, row.sums]), more)
+
+
+def joined(
+    blocks: list[tuple[Integers, NDArray[Any], NDArray[Any]]],
+    rank: NDArray[np.int32],
+    rename: NDArray[np.int32] | None,
+    dtype: Any,
+    n_replicate: int,
+    *,
+    ascending: bool,
+) -> tuple[Integers, NDArray[Any], NDArray[Any]]:
+    """Concatenate the rows of blocks, put row i in place `rank[i]`, rename the columns; blocks are used up."""
+    lengths = np.concatenate([np.diff(pointer) for pointer, _, _ in blocks])
+    pointer = np.zeros(len(lengths) + 1, dtype=np.int64)
+    pointer[1:][rank] = lengths
+    np.cumsum(pointer, out=pointer)
+    column = np.empty(int(pointer[-1]), dtype=dtype)
+    widest: Sequence[Any] = [count.dtype for _, _, count in blocks]
+    count = np.empty((int(pointer[-1]), n_replicate), dtype=np.result_type(*widest))
+    names = np.zeros(0, dtype=np.int32) if rename is None else rename
+    at = 0
+    while blocks:
+        block = blocks.pop(0)
+        place_rows(*block, rank[at : at + len(block[0]) - 1], pointer, names, ascending, column, count)
+        at += len(block[0]) - 1
+    return pointer, column, count

@@ -1,0 +1,79 @@
+"""The row-stochastic matrix of a tally, never stored as floats."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from perdure._kernels.products import (
+    left_product,
+    replicate_product,
+    right_product,
+    scatter_product,
+    total_counts,
+)
+from perdure._records import Floats, SlotRows, Tally
+
+__all__ = ["TransitionMatrix", "scattered_slots"]
+
+
+class TransitionMatrix:
+    """Ulam's matrix: tally divided by its row sums. P[i, j] goes from cell i to cell j.
+
+    The outside and blown-up states are not among its cells: rows of cells that leak sum to less than one.
+    Work: one product costs the number of entries.
+    """
+
+    def __init__(self, tally: Tally) -> None:
+        self.tally = tally
+        total = np.empty(len(tally.column), dtype=np.min_scalar_type(int(tally.bursts.sum(axis=1).max(initial=0))))
+        total_counts(tally.count, total)
+        self.total = total
+        self.inverse = 1.0 / tally.bursts.sum(axis=1)
+
+    @property
+    def n_cell(self) -> int:
+        return self.tally.n_cell
+
+    def left(self, mass: Floats) -> Floats:
+        """mass @ P, shape (n_cell,) or (n_cell, k)."""
+        x = np.ascontiguousarray(mass.reshape(self.n_cell, -1), dtype=float)
+        y = np.empty((self.n_cell + 2, x.shape[1]))
+        left_product(self.tally.pointer, self.tally.column, self.total, self.inverse, x, y)
+        return y[: self.n_cell].reshape(mass.shape)
+
+    def right(self, values: Floats) -> Floats:
+        """P @ values, shape (n_cell,) or (n_cell, k)."""
+        x = np.zeros((self.n_cell + 2, values.size // max(self.n_cell, 1)))
+        x[: self.n_cell] = values.reshape(self.n_cell, -1)
+        y = np.empty((self.n_cell, x.shape[1]))
+        right_product(self.tally.pointer, self.tally.column, self.total, self.inverse, x, 0, self.n_cell, y)
+        return y.reshape(values.shape)
+
+    def leak(self) -> Floats:
+        """Probability, shape (n_cell,), of ending outside or blown up."""
+        return 1.0 - self.right(np.ones(self.n_cell))
+
+    def replicate_right(self, values: Floats, begin: int, end: int) -> Floats:
+        """Mean of values (n_cell, k) where the bursts of each cell and replicate ended.
+
+        Rows `begin` to `end` only; shape (end - begin, n_replicate, k). Outside counts as zero.
+        """
+        tally = self.tally
+        x = np.zeros((self.n_cell + 2, values.shape[1]))
+        x[: self.n_cell] = values
+        y = np.empty((end - begin, tally.count.shape[1], values.shape[1]))
+        replicate_product(tally.pointer, tally.column, tally.count, x, begin, end, y)
+        return np.asarray(y / tally.bursts[begin:end, :, None])
+
+    def scatter(self, weight: Floats, begin: int, out: Floats) -> None:
+        """Add count * weight of each cell and replicate, weight (n, n_replicate, k), to the cells where bursts ended.
+
+        `begin` is the first cell; out (n_cell + 2, k).
+        """
+        tally = self.tally
+        scatter_product(tally.pointer, tally.column, tally.count, weight, begin, begin + len(weight), out)
+
+
+def scattered_slots(slots: SlotRows, weight: Floats, begin: int, out: Floats) -> None:
+    """Add count * weight, as `TransitionMatrix.scatter`, to the marginal intervals; out (n_slot, k)."""
+    scatter_product(slots.pointer, slots.column, slots.count, weight, begin, begin + len(weight), out)
