@@ -180,15 +180,12 @@ class Result:
         n = len(self._weights())
         if not n:
             raise EstimateError(
-                f"{self.title}: no long-run density exists (outcome {self.outcome!r}): "
-                + " ".join(self.messages)
+                f"{self.title}: no long-run density exists (outcome {self.outcome!r}): " + " ".join(self.messages)
             )
         if not 0 <= regime < n:
             raise UsageError(f"density_of: regime is {regime}; it must be from 0 to {n - 1}")
         cell, mass = self._law(regime)
-        return Density(
-            self.grid, self.keys[cell], mass, self.state, self.units, dict(self._marginals(regime))
-        )
+        return Density(self.grid, self.keys[cell], mass, self.state, self.units, dict(self._marginals(regime)))
 
     @property
     def outside_share(self) -> Quantity:
@@ -228,9 +225,7 @@ class Result:
         """
         tally = self.tally
         if tally is None:
-            raise UsageError(
-                f"{self.title}: the matrix was not kept; set [output] matrix = true and run again"
-            )
+            raise UsageError(f"{self.title}: the matrix was not kept; set [output] matrix = true and run again")
         return tally
 
     @property

@@ -9,12 +9,14 @@ from perdure import Case
 GOLDEN = (1 + 5**0.5) / 2
 
 
-def flat_map(equation: str, events: dict[str, str], **more: Any) -> dict[str, Any]:
-    """Tables of a map in one variable."""
+def flat_map(
+    equation: str, events: dict[str, str], observables: dict[str, str] | None = None, **more: Any
+) -> dict[str, Any]:
+    """Tables of a map in one variable; its first two moments unless other observables are given."""
     return {
         "system": {"kind": "map", "state": ["x"], "equations": {"x": equation}} | more,
         "events": {name: {"when": when} for name, when in events.items()},
-        "observables": {"x": "x", "x2": "x**2"},
+        "observables": observables or {"x": "x", "x2": "x**2"},
     }
 
 
@@ -28,7 +30,11 @@ def plane_map(x: str, y: str, events: dict[str, dict[str, Any]], **more: Any) ->
 
 
 def noisy(
-    equations: dict[str, str], noise: dict[str, Any], events: dict[str, str], observables: dict[str, str], **more: Any
+    equations: dict[str, str],
+    noise: dict[str, Any],
+    events: dict[str, str],
+    observables: dict[str, str],
+    **more: Any,
 ) -> dict[str, Any]:
     """Tables of a noisy flow."""
     system = {"kind": "noisy-flow", "state": list(equations), "equations": equations, "noise": noise} | more
@@ -53,6 +59,7 @@ TABLES: dict[str, dict[str, Any]] = {
             "D": "0.25 <= x <= 0.75",
             "E": "0.001 <= x <= 0.01",
         },
+        {"x": "x", "x2": "x**2", "x3": "x**3"},
         parameters={"r": 4.0},
     ),
     "P02-skew-tent": flat_map(
@@ -63,6 +70,7 @@ TABLES: dict[str, dict[str, Any]] = {
     "P03-gauss": flat_map(
         "1/x - floor(1/x) if x > 0 else 0",
         {"A": "0 <= x <= 0.1", "B": "0.2 <= x <= 0.3", "C": "0.9 <= x <= 1", "D": "1/3 < x <= 1/2"},
+        {"x": "x", "x2": "x**2", "digit": "log(floor(1/x)) if x > 0 else 0"},
     ),
     "P04-golden-beta": flat_map(
         "(beta*x) % 1",
@@ -72,6 +80,7 @@ TABLES: dict[str, dict[str, Any]] = {
     "P05-chebyshev3": flat_map(
         "4*x**3 - 3*x",
         {"A": "0.5 <= x <= 1", "B": "-0.1 <= x <= 0.1", "C": "-1 <= x <= -0.9", "D": "0.2 <= x <= 0.6"},
+        {"x": "x", "x2": "x**2", "x4": "x**4"},
     ),
     "P06-cusp": flat_map(
         "1 - 2*sqrt(abs(x))",
@@ -89,6 +98,7 @@ TABLES: dict[str, dict[str, Any]] = {
     "P09-boole-cauchy": flat_map(
         "alpha*x - beta/x",
         {"A": "-1 <= x <= 1", "B": "2 <= x <= 5", "D": "-0.2 <= x <= 0.1", "C": "x > 10"},
+        {"lnx": "log(abs(x))"},
         parameters={"alpha": 0.5, "beta": 0.5},
     ),
     "P10-boole-infinite": flat_map("x - 1/x", {"A": "-1 <= x <= 1"}),
@@ -151,8 +161,15 @@ TABLES: dict[str, dict[str, Any]] = {
     "P17-ou2": noisy(
         {"x1": "-0.6*x1 + 1.5*x2", "x2": "-x1 - 0.4*x2"},
         {"matrix": [[0.7, 0], [0.2, 0.5]]},
-        {"A": "x1 > 0.5", "B": "x1 > 0 and x2 > 0", "E": "0 < x1 < 0.6 and -0.5 < x2 < 0.2"},
+        {
+            "A": "x1 > 0.5",
+            "B": "x1 > 0 and x2 > 0",
+            # one standard deviation: x . inverse(covariance) x < 1, covariance [[s11, s12], [s12, s22]]
+            "D": "(s22*x1**2 - 2*s12*x1*x2 + s11*x2**2)/(s11*s22 - s12**2) < 1",
+            "E": "0 < x1 < 0.6 and -0.5 < x2 < 0.2",
+        },
         {"x11": "x1**2", "x12": "x1*x2", "x22": "x2**2"},
+        parameters={"s11": 0.5033045977011494, "s12": 0.037988505747126436, "s22": 0.26752873563218393},
     ),
     "P18-double-well": noisy(
         {"x": "x - x**3"},
@@ -184,7 +201,7 @@ TABLES: dict[str, dict[str, Any]] = {
             "D": "x > 0.5",
             "E": "0.8 < sqrt(x**2 + y**2) < 1.1 and x > 0 and y > 0",
         },
-        {"r2": "x**2 + y**2"},
+        {"r2": "x**2 + y**2", "r4": "(x**2 + y**2)**2"},
         parameters={"mu": 1.0, "omega": 2.0, "sigma": 0.5},
     ),
     "P21-cir": noisy(
@@ -216,7 +233,8 @@ TABLES: dict[str, dict[str, Any]] = {
         "events": {"right": {"when": "x > 1"}},
     },
     "P30-two-logistic": flat_map(
-        "4*x*(1 - 2*x) if x < 0.5 else 0.5 + 2*(2*x - 1)*(2 - 2*x)", {"A": "0.1 <= x <= 0.2", "B": "0.9 <= x <= 1"}
+        "4*x*(1 - 2*x) if x < 0.5 else 0.5 + 2*(2*x - 1)*(2 - 2*x)",
+        {"A": "0.1 <= x <= 0.2", "B": "0.9 <= x <= 1"},
     )
     | {"cells": {"lower": {"x": 0.0}, "upper": {"x": 1.0}}},
     "P32-tilted-response": noisy(

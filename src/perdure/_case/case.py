@@ -95,9 +95,7 @@ class Case(CaseRecord):
         functions = Functions()
         if isinstance(system, Mapping):
             functions = Functions(system.get("function"), system.get("noise_function"))
-            given["system"] = {
-                key: system[key] for key in system if key not in ("function", "noise_function")
-            }
+            given["system"] = {key: system[key] for key in system if key not in ("function", "noise_function")}
         _fill(self, _build_from_python(given, functions, PYTHON))
 
     @classmethod
@@ -153,12 +151,8 @@ def load_case(path: str | os.PathLike[str], *, seed: int | None = None) -> Case:
     UsageError
         `seed` is not allowed.
     """
-    if seed is not None and (
-        isinstance(seed, bool) or not isinstance(seed, int) or not 0 <= seed <= LARGEST_SEED
-    ):
-        raise UsageError(
-            f"load_case, seed: found {show(seed)}; allowed: a whole number from 0 to 2**128; give one"
-        )
+    if seed is not None and (isinstance(seed, bool) or not isinstance(seed, int) or not 0 <= seed <= LARGEST_SEED):
+        raise UsageError(f"load_case, seed: found {show(seed)}; allowed: a whole number from 0 to 2**128; give one")
     text, found = read_text(path)
     # File names may hold what texts in a density file may not.
     name, stem = (_printable(part) for part in (found.name, found.stem))
@@ -188,12 +182,9 @@ def _build_from_python(given: Mapping[str, Any], functions: Functions, source_na
         except TypeError as error:
             problems.add(
                 (name,),
-                f"found {error}; allowed: texts, numbers, booleans, dates, lists and dicts with text keys; "
-                "replace it",
+                f"found {error}; allowed: texts, numbers, booleans, dates, lists and dicts with text keys; replace it",
             )
     # What no case file can hold would trip the checks of single tables.
     problems.raise_if_any()
     text = function_comments(functions) + write_tables(tables)
-    return build_case(
-        tables, problems, text=text, source_name=source_name, title="untitled", functions=functions
-    )
+    return build_case(tables, problems, text=text, source_name=source_name, title="untitled", functions=functions)

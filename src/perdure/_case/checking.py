@@ -66,17 +66,13 @@ def _finding(model: type[Table], key: str, kind: str, value: Any) -> str:
     return f"found {found}; allowed: {field.description}; {remedy}"
 
 
-def sub_table(
-    problems: Problems, tables: Mapping[str, Any], key: str, path: Path = ()
-) -> dict[str, Any] | None:
+def sub_table(problems: Problems, tables: Mapping[str, Any], key: str, path: Path = ()) -> dict[str, Any] | None:
     """Table `key`, or None if it is absent or not a table (which is then a mistake)."""
     value = tables.get(key)
     if value is None:
         return None
     if not isinstance(value, dict):
-        problems.add(
-            (*path, key), f"found {show(value)}; allowed: a table; write it as a table of keys and values"
-        )
+        problems.add((*path, key), f"found {show(value)}; allowed: a table; write it as a table of keys and values")
         return None
     return value
 

@@ -132,6 +132,4 @@ def _numeric_parts(node: ast.expr) -> Iterator[ast.expr]:
 
 def tree_names(node: ast.expr) -> frozenset[str]:
     """Names (without prefix) of state components, parameters and draws in a part of a source tree."""
-    return frozenset(
-        part.id[2:] for part in ast.walk(node) if isinstance(part, ast.Name) and part.id.startswith("v_")
-    )
+    return frozenset(part.id[2:] for part in ast.walk(node) if isinstance(part, ast.Name) and part.id.startswith("v_"))

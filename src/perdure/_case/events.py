@@ -52,9 +52,7 @@ def read_events(
         if finding:
             problems.add(path, finding)
         if not isinstance(given, dict):
-            problems.add(
-                path, f"found {show(given)}; allowed: a table with ball, box or when; write [events.NAME]"
-            )
+            problems.add(path, f"found {show(given)}; allowed: a table with ball, box or when; write [events.NAME]")
             continue
         event = _event(problems, name, check_table(problems, EventTable, given, path), given, declared, cells)
         if event is not None:
@@ -99,9 +97,7 @@ def _event(
     return None if condition is None else Event(name, condition, until)
 
 
-def _must_depend(
-    problems: Problems, condition: Expression | None, state: tuple[str, ...], path: Path
-) -> None:
+def _must_depend(problems: Problems, condition: Expression | None, state: tuple[str, ...], path: Path) -> None:
     if condition is not None and condition.names.isdisjoint(state):
         problems.add(
             path,
@@ -172,9 +168,7 @@ def _interval_findings(name: str, low: float, high: float, space: Space) -> list
         ]
     period = space.periods[name][1] if name in space.periods else math.inf
     if math.isfinite(high - low) and high - low >= period:
-        return [
-            f"found {low!r} to {high!r}, a whole period; allowed: less than {period!r}; leave {name!r} out"
-        ]
+        return [f"found {low!r} to {high!r}, a whole period; allowed: less than {period!r}; leave {name!r} out"]
     return []
 
 

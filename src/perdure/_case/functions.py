@@ -45,8 +45,7 @@ def check_functions(
     if functions.noise_function is not None and (functions.function is None or kind != "noisy-flow"):
         problems.add(
             ("system", "noise_function"),
-            "found a noise function; allowed: only in a noisy-flow given by a function; remove it or give "
-            "both",
+            "found a noise function; allowed: only in a noisy-flow given by a function; remove it or give both",
         )
     for key, function in (("function", functions.function), ("noise_function", functions.noise_function)):
         if function is None:

@@ -99,8 +99,6 @@ def build_case(
 def _check_names_of_tables(problems: Problems, tables: Mapping[str, Any]) -> None:
     for name in tables:
         if name in NOT_YET:
-            problems.add(
-                (name,), f"found the table [{name}]; {NOT_YET[name]}; allowed: {', '.join(TABLES)}; remove it"
-            )
+            problems.add((name,), f"found the table [{name}]; {NOT_YET[name]}; allowed: {', '.join(TABLES)}; remove it")
         elif name not in TABLES:
             problems.add_unknown((name,), TABLES, "table")

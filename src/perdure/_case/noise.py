@@ -42,9 +42,7 @@ def read_noise(
         return ()
     if by_function is not None:
         if given is not None:
-            problems.add(
-                PATH, "found coefficients beside a function; allowed: noise_function; give it instead"
-            )
+            problems.add(PATH, "found coefficients beside a function; allowed: noise_function; give it instead")
         if not by_function:
             problems.add(
                 ("system", "noise_function"),
@@ -67,9 +65,7 @@ def read_noise(
     return _diagonal(problems, given, state, names)
 
 
-def _diagonal(
-    problems: Problems, given: Mapping[str, Any], state: tuple[str, ...], names: tuple[str, ...]
-) -> Matrix:
+def _diagonal(problems: Problems, given: Mapping[str, Any], state: tuple[str, ...], names: tuple[str, ...]) -> Matrix:
     for name in given:
         if name not in state:
             problems.add_unknown((*PATH, name), (*state, "matrix"), "state name")
@@ -78,31 +74,23 @@ def _diagonal(
     return tuple(tuple((found[row] or ZERO) if row == column else ZERO for column in listed) for row in state)
 
 
-def _matrix(
-    problems: Problems, given: Mapping[str, Any], state: tuple[str, ...], names: tuple[str, ...]
-) -> Matrix:
+def _matrix(problems: Problems, given: Mapping[str, Any], state: tuple[str, ...], names: tuple[str, ...]) -> Matrix:
     path = (*PATH, "matrix")
     for name in given:
         if name != "matrix":
             problems.add(
                 (*PATH, name),
-                f"found {name!r} beside matrix; allowed: a matrix, or a coefficient per state component; "
-                "remove one",
+                f"found {name!r} beside matrix; allowed: a matrix, or a coefficient per state component; remove one",
             )
     rows = given["matrix"]
-    example = (
-        "write a row per state component, for example " + "[" + ", ".join(['["0.1"]'] * len(state)) + "]"
-    )
+    example = "write a row per state component, for example " + "[" + ", ".join(['["0.1"]'] * len(state)) + "]"
     if not isinstance(rows, list) or not all(isinstance(row, list) for row in rows):
-        problems.add(
-            path, f"found {show(rows)}; allowed: a list of rows, each a list of expressions; {example}"
-        )
+        problems.add(path, f"found {show(rows)}; allowed: a list of rows, each a list of expressions; {example}")
         return ()
     if len(rows) != len(state):
         problems.add(
             path,
-            f"found {len(rows)} rows, the wrong dimension; allowed: {len(state)}, one per state component; "
-            f"{example}",
+            f"found {len(rows)} rows, the wrong dimension; allowed: {len(state)}, one per state component; {example}",
         )
         return ()
     if len({len(row) for row in rows}) > 1 or not rows[0]:

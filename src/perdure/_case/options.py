@@ -35,21 +35,16 @@ def read_cells(problems: Problems, tables: Mapping[str, Any], declared: Declared
             'method = "boxes" or leave it out',
         )
     elif table.method not in (None, "boxes"):
-        problems.add(
-            ("cells", "method"), f'found {show(table.method)}; allowed: "boxes"; correct it or leave it out'
-        )
+        problems.add(("cells", "method"), f'found {show(table.method)}; allowed: "boxes"; correct it or leave it out')
     if table.count is not None and table.counts:
-        problems.add(
-            ("cells", "count"), "found count beside counts; allowed: one of the two; remove the other"
-        )
+        problems.add(("cells", "count"), "found count beside counts; allowed: one of the two; remove the other")
     if len(problems) > found_before:
         return CellOptions()
     _check_domain(problems, table, declared)
     if math.prod(table.counts.values()) >= MOST_CELLS:
         problems.add(
             ("cells", "counts"),
-            f"found {math.prod(table.counts.values()):.3g} cells; allowed: fewer than 2**62; lower the "
-            "counts",
+            f"found {math.prod(table.counts.values()):.3g} cells; allowed: fewer than 2**62; lower the counts",
         )
     if len(problems) > found_before:
         return CellOptions()
@@ -76,9 +71,7 @@ def _check_domain(problems: Problems, table: CellsTable, declared: Declared) -> 
         if declared.state is not None and name not in declared.state:
             close = grammar.nearest(name, declared.state)
             remedy = f"did you mean {close!r}?" if close else "remove or correct it"
-            problems.add(
-                path, f"found the unknown state name {name!r}; allowed: {listed(declared.state)}; {remedy}"
-            )
+            problems.add(path, f"found the unknown state name {name!r}; allowed: {listed(declared.state)}; {remedy}")
         elif name in table.periodic[:index]:
             problems.add(path, f"found {name!r} a second time; allowed: each name once; remove one")
         elif name not in table.lower or name not in table.upper:
@@ -95,9 +88,7 @@ def read_bursts(problems: Problems, tables: Mapping[str, Any], declared: Declare
     table = check_table(problems, BurstsTable, sub_table(problems, tables, "bursts") or {}, ("bursts",))
     kind = declared.kind
     if table.duration is not None and table.steps is not None:
-        problems.add(
-            ("bursts", "steps"), "found steps beside duration; allowed: one of the two; remove the other"
-        )
+        problems.add(("bursts", "steps"), "found steps beside duration; allowed: one of the two; remove the other")
     if kind is not None:
         is_flow = kind.endswith("flow")
         for key, other in (("steps", "duration"),) if is_flow else (("duration", "steps"), ("step", "steps")):
@@ -110,8 +101,7 @@ def read_bursts(problems: Problems, tables: Mapping[str, Any], declared: Declare
     if table.duration is not None and table.step is not None and table.step > table.duration:
         problems.add(
             ("bursts", "step"),
-            f"found step {table.step!r} above duration {table.duration!r}; allowed: at most the duration; "
-            "lower it",
+            f"found step {table.step!r} above duration {table.duration!r}; allowed: at most the duration; lower it",
         )
     if table.reseed:
         problems.add(

@@ -89,11 +89,7 @@ def _expressions(
 def _cause(part: ast.expr, constants: Mapping[str, float]) -> str:
     for node in ast.walk(part):
         divisor = _divisor(node)
-        if (
-            divisor is not None
-            and _is_constant(divisor, constants)
-            and evaluate_tree(divisor, constants) == 0.0
-        ):
+        if divisor is not None and _is_constant(divisor, constants) and evaluate_tree(divisor, constants) == 0.0:
             return (
                 f"division by zero: {_zero_text(divisor, constants)}; allowed: a divisor that is not 0 "
                 "everywhere; change the parameter or the expression"

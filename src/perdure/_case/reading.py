@@ -48,9 +48,7 @@ def read_text(path: str | os.PathLike[str]) -> tuple[str, Path]:
             "the path or its permissions"
         ) from None
     if len(data) > LARGEST_FILE:
-        raise CaseError(
-            f"{name}: found more than 1 MiB; allowed: case files up to 1 MiB; is this a case file?"
-        )
+        raise CaseError(f"{name}: found more than 1 MiB; allowed: case files up to 1 MiB; is this a case file?")
     try:
         return data.decode("utf-8"), path
     except UnicodeDecodeError as error:
@@ -82,18 +80,14 @@ def parse_tables(text: str, name: str) -> dict[str, Any]:
             "lines, texts in quotes; correct it"
         ) from None
     except RecursionError:
-        raise CaseError(
-            f"{name}: found brackets nested too deep; allowed: a few levels; remove the nesting"
-        ) from None
+        raise CaseError(f"{name}: found brackets nested too deep; allowed: a few levels; remove the nesting") from None
     except ValueError as error:
         reason = str(error).split(":")[0][:100]
         raise CaseError(
-            f"{name}: found a number or date that cannot be read ({reason}); allowed: numbers below 1.8e308; "
-            "correct it"
+            f"{name}: found a number or date that cannot be read ({reason}); allowed: numbers below 1.8e308; correct it"
         ) from None
     if not tables:
         raise CaseError(
-            f"{name}: found an empty file; allowed: a case with the table [system]; write one, or give "
-            "another file"
+            f"{name}: found an empty file; allowed: a case with the table [system]; write one, or give another file"
         )
     return tables

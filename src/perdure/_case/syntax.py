@@ -154,13 +154,9 @@ class Translator:
         if name in grammar.CONSTANTS:
             return Piece(repr(grammar.CONSTANTS[name]), NUMBER)
         if name in grammar.FUNCTIONS:
-            self._add(
-                f"found the function {name!r} without arguments; allowed: {name}(...); give its arguments"
-            )
+            self._add(f"found the function {name!r} without arguments; allowed: {name}(...); give its arguments")
             return _BROKEN
-        self._add(
-            f"found the unknown name {name[:80]!r}; allowed: {self._name_list()}; {self._name_remedy(name)}"
-        )
+        self._add(f"found the unknown name {name[:80]!r}; allowed: {self._name_list()}; {self._name_remedy(name)}")
         return _BROKEN
 
     def _name_list(self) -> str:
@@ -256,9 +252,7 @@ class Translator:
         if name not in grammar.FUNCTIONS:
             return self._unknown_function(node, name)
         if node.keywords or any(isinstance(argument, ast.Starred) for argument in node.args):
-            return self._refuse(
-                node, "with a named or starred argument", f"write {name}(...) with plain arguments"
-            )
+            return self._refuse(node, "with a named or starred argument", f"write {name}(...) with plain arguments")
         n_needed, open_ended = grammar.FUNCTIONS[name], name in grammar.ANY_NUMBER_OF_ARGUMENTS
         if n_given < n_needed or (n_given > n_needed and not open_ended):
             allowed = f"{n_needed} or more" if open_ended else f"exactly {n_needed}"

@@ -46,9 +46,7 @@ class Declared:
         return (*(self.state or ()), *self.parameters)
 
 
-def read_system(
-    problems: Problems, tables: Mapping[str, Any], functions: Functions
-) -> tuple[Declared, System | None]:
+def read_system(problems: Problems, tables: Mapping[str, Any], functions: Functions) -> tuple[Declared, System | None]:
     """The declared names, and the system if nothing in its table was wrong."""
     found_before = len(problems)
     raw = sub_table(problems, tables, "system")
@@ -56,8 +54,7 @@ def read_system(
         if tables.get("system") is None:
             problems.add(
                 (),
-                "found no table [system]; allowed: exactly one; write [system] with kind, state and "
-                "equations",
+                "found no table [system]; allowed: exactly one; write [system] with kind, state and equations",
             )
         return Declared(None, None, {}, {}), None
     raw = dict(raw)
@@ -178,9 +175,7 @@ def _draws(problems: Problems, given: Mapping[str, Any] | None, kind: str | None
             )
         return {}
     if kind is not None and kind != "noisy-map":
-        remedy = (
-            "use [system.noise]" if kind == "noisy-flow" else 'remove the table or write kind = "noisy-map"'
-        )
+        remedy = "use [system.noise]" if kind == "noisy-flow" else 'remove the table or write kind = "noisy-map"'
         problems.add(path, f"found draws in a {kind}; allowed: only in a noisy-map; {remedy}")
     elif not given:
         problems.add(
@@ -259,6 +254,5 @@ def _all_drawn(problems: Problems, declared: Declared, equations: list[Expressio
         if name not in used:
             problems.add(
                 (*PATH, "draws", name),
-                f"found the draw {name!r}, which no equation uses; allowed: draws that are used; use or "
-                "remove it",
+                f"found the draw {name!r}, which no equation uses; allowed: draws that are used; use or remove it",
             )

@@ -56,13 +56,9 @@ class CaseTable(Table):
     """``[case]``."""
 
     title: Line | None = Field(default=None, description="a text on one line", examples=["Convection loop"])
-    seed: int = Field(
-        default=0, ge=0, le=LARGEST_SEED, description="a whole number from 0 to 2**128", examples=[7]
-    )
+    seed: int = Field(default=0, ge=0, le=LARGEST_SEED, description="a whole number from 0 to 2**128", examples=[7])
     accuracy: float = Field(default=0.05, gt=0, lt=1, description="a number between 0 and 1", examples=[0.05])
-    caution: Lines = Field(
-        default="", description="a text without control characters", examples=["Screening only."]
-    )
+    caution: Lines = Field(default="", description="a text without control characters", examples=["Screening only."])
 
 
 class SystemTable(Table):
@@ -87,9 +83,7 @@ class ParameterTable(Table):
 
     value: float = Field(description="a finite number", examples=[10.0])
     unit: Unit = Field(default="1", description=UNIT, examples=["1/s"])
-    doc: Lines = Field(
-        default="", description="a text without control characters", examples=["Prandtl number"]
-    )
+    doc: Lines = Field(default="", description="a text without control characters", examples=["Prandtl number"])
 
 
 class EventTable(Table):
@@ -112,9 +106,7 @@ class EventTable(Table):
 class BallTable(Table):
     """``ball = {...}`` of an event."""
 
-    centre: list[float] = Field(
-        description="a list of finite numbers in state order", examples=[[8.0, 8.0, 27.0]]
-    )
+    centre: list[float] = Field(description="a list of finite numbers in state order", examples=[[8.0, 8.0, 27.0]])
     radius: Positive = Field(description="a number above 0", examples=[5.0])
     scale: list[Positive] | None = Field(
         default=None, description="a list of numbers above 0 in state order", examples=[[1.0, 1.0, 2.0]]
@@ -150,26 +142,20 @@ class CellsTable(Table):
     count: int | None = Field(
         default=None, ge=1, lt=2**62, description="a whole number from 1 to 2**62 - 1", examples=[10000]
     )
-    periodic: list[str] = Field(
-        default_factory=list, description="a list of state names", examples=[["theta"]]
-    )
+    periodic: list[str] = Field(default_factory=list, description="a list of state names", examples=[["theta"]])
 
 
 class BurstsTable(Table):
     """``[bursts]``."""
 
     duration: Positive | None = Field(default=None, description="a number above 0", examples=[0.5])
-    steps: int | None = Field(
-        default=None, ge=1, le=10**9, description="a whole number from 1 to 10**9", examples=[4]
-    )
+    steps: int | None = Field(default=None, ge=1, le=10**9, description="a whole number from 1 to 10**9", examples=[4])
     step: Positive | None = Field(default=None, description="a number above 0", examples=[0.01])
     per_cell: int | None = Field(
         default=None, ge=2, le=10**9, description="a whole number from 2 to 10**9", examples=[64]
     )
     reseed: bool | None = Field(default=None, description="false", examples=[False])
-    sweeps: int | None = Field(
-        default=None, ge=1, le=10**6, description="a whole number from 1 to 10**6", examples=[8]
-    )
+    sweeps: int | None = Field(default=None, ge=1, le=10**6, description="a whole number from 1 to 10**6", examples=[8])
     seeds: str = Field(default="sobol", description='"uniform" or "sobol"', examples=["sobol"])
     scheme: str | None = Field(default=None, description="a scheme in quotes", examples=["rk4"])
 
@@ -185,6 +171,4 @@ class OutputTable(Table):
     """``[output]``."""
 
     matrix: bool = Field(default=True, description="true or false", examples=[True])
-    intervals: int = Field(
-        default=50, ge=2, le=10_000, description="a whole number from 2 to 10000", examples=[50]
-    )
+    intervals: int = Field(default=50, ge=2, le=10_000, description="a whole number from 2 to 10000", examples=[50])

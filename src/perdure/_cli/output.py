@@ -38,8 +38,7 @@ def print_text(text: str) -> None:
         # The rest of the buffer would fail once more at exit, with a status of Python's own.
         _silence(sys.stdout)
         raise ResourceError(
-            f"standard output: the results could not be written ({error.strerror}). Redirect them to a "
-            "place with room"
+            f"standard output: the results could not be written ({error.strerror}). Redirect them to a place with room"
         ) from error
 
 

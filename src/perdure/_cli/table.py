@@ -30,17 +30,13 @@ def results_text(result: Result | DensityFile, *, verbose: bool = False) -> str:
     blocks = [[result.title, f"outcome: {result.outcome.replace('-', ' ')}"]]
     blocks[0] += [f"  {message}" for message in result.messages]
     if not result.checks_passed:
-        blocks[0].append(
-            "  a stated check failed: do not rely on the numbers before the messages above are dealt with"
-        )
+        blocks[0].append("  a stated check failed: do not rely on the numbers before the messages above are dealt with")
     for position, regime in enumerate(result.regimes):
         if len(result.regimes) > 1:
             blocks.append([_regime_title(regime, position, len(result.regimes))])
         blocks += _regime_blocks(regime)
     blocks.append(
-        _table(
-            [["outside share", *quantity_cells(result.outside_share)]], ("", "value", "95 percent interval")
-        )
+        _table([["outside share", *quantity_cells(result.outside_share)]], ("", "value", "95 percent interval"))
     )
     blocks.append([_covered(result)])
     blocks.append(_cost(result, verbose))
@@ -112,8 +108,7 @@ def _regime_blocks(regime: Regime) -> list[list[str]]:
 def _rows(name: str, numbers: Iterable[tuple[str, Quantity]]) -> list[list[str]]:
     """One row per number; the name stands in the first only."""
     return [
-        ["" if position else name, what, *quantity_cells(quantity)]
-        for position, (what, quantity) in enumerate(numbers)
+        ["" if position else name, what, *quantity_cells(quantity)] for position, (what, quantity) in enumerate(numbers)
     ]
 
 
@@ -124,10 +119,7 @@ def _table(rows: Sequence[Sequence[str]], head: Sequence[str]) -> list[str]:
     """
     lines = [list(head), *(list(row) for row in rows)]
     n_column = len(head)
-    widths = [
-        max((len(line[k]) for line in lines if k < n_column - 2 or line[-1]), default=0)
-        for k in range(n_column)
-    ]
+    widths = [max((len(line[k]) for line in lines if k < n_column - 2 or line[-1]), default=0) for k in range(n_column)]
     texts = ["  ".join(cell.ljust(width) for cell, width in zip(line, widths, strict=True)) for line in lines]
     return [text.rstrip() for text in texts]
 
@@ -136,9 +128,7 @@ def _covered(result: Result | DensityFile) -> str:
     """Which parts of the error budget are in the errors shown; nobody shall take them for the whole."""
     numbers = [result.outside_share]
     for regime in result.regimes:
-        numbers += [
-            number for event in regime.events.values() for number in (event.share, event.return_period)
-        ]
+        numbers += [number for event in regime.events.values() for number in (event.share, event.return_period)]
         numbers += [observable.mean for observable in regime.observables.values()]
     parts = sorted({part for number in numbers for part in number.parts})
     if set(parts) <= {"sampling"}:

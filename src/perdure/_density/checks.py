@@ -20,9 +20,7 @@ def frozen(array: ArrayLike, dtype: type[Any]) -> NDArray[Any]:
     return copy
 
 
-def check(
-    lattice: BoxGrid, keys: Integers, mass: Floats, state: tuple[str, ...], units: tuple[str, ...]
-) -> None:
+def check(lattice: BoxGrid, keys: Integers, mass: Floats, state: tuple[str, ...], units: tuple[str, ...]) -> None:
     """Refuse arrays that do not make a density."""
     if not len(state) == len(units) == lattice.n_dim:
         raise UsageError(
@@ -30,9 +28,7 @@ def check(
             "axes; give one of each per axis"
         )
     if keys.ndim != 1 or keys.shape != mass.shape or not len(keys):
-        raise UsageError(
-            f"Density: keys has shape {keys.shape}, mass {mass.shape}; both must be (n_cell,), not empty"
-        )
+        raise UsageError(f"Density: keys has shape {keys.shape}, mass {mass.shape}; both must be (n_cell,), not empty")
     size = float(np.prod(lattice.counts.astype(float)))
     if np.any(np.diff(keys) <= 0) or keys[0] < 0 or keys[-1] >= size:
         raise UsageError(

@@ -106,9 +106,7 @@ class Density:
     def edges(self, name: str) -> Floats:
         """Edges of the cells along one component, shape (count + 1,). Unit of the component."""
         axis = self._axis(name)
-        edges: Floats = (
-            self.lattice.lower[axis] + np.arange(self.lattice.counts[axis] + 1) * self.lattice.width[axis]
-        )
+        edges: Floats = self.lattice.lower[axis] + np.arange(self.lattice.counts[axis] + 1) * self.lattice.width[axis]
         return edges
 
     # ------------------------------------------------------------------------------- look up
@@ -280,8 +278,7 @@ class Density:
             return self.state.index(name)
         near = difflib.get_close_matches(str(name), self.state, n=1, cutoff=0.0)[0]
         raise UsageError(
-            f"Density: no state component is called {name!r}; there is {', '.join(self.state)}; "
-            f"did you mean {near!r}?"
+            f"Density: no state component is called {name!r}; there is {', '.join(self.state)}; did you mean {near!r}?"
         )
 
     # ------------------------------------------------------------------------------- as a grid
@@ -294,9 +291,7 @@ class Density:
         index = self.lattice.indices(self.keys[held]).T
         shape = tuple(int(n) for n in self.lattice.counts)
         # The keys ascend, so nothing needs sorting or summing: that would compile for a second.
-        return sparse.COO(
-            index, self.mass[held], shape=shape, sorted=True, has_duplicates=False, fill_value=0.0
-        )
+        return sparse.COO(index, self.mass[held], shape=shape, sorted=True, has_duplicates=False, fill_value=0.0)
 
     def to_xarray(self) -> xarray.DataArray:
         """Masses as a labelled array over sparse storage, one dimension per component.
@@ -310,8 +305,7 @@ class Density:
             import xarray
         except ImportError as error:
             raise UsageError(
-                f"Density.to_xarray: the package xarray cannot be imported ({error}); install it "
-                "or use `grid`"
+                f"Density.to_xarray: the package xarray cannot be imported ({error}); install it or use `grid`"
             ) from error
         centres = {name: 0.5 * (e[:-1] + e[1:]) for name, e in ((n, self.edges(n)) for n in self.state)}
         coordinates = {

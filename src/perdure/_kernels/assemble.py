@@ -6,7 +6,7 @@ import numpy as np
 
 from perdure._kernels.folders import kernel
 
-__all__ = ["place_rows"]
+__all__ = ["merge_repeats", "place_rows"]
 
 
 @kernel
@@ -33,3 +33,29 @@ def place_rows(block_pointer, block_column, block_count, place, pointer, rename,
             column[to + k] = names[order[k]]
             for r in range(count.shape[1]):
                 count[to + k, r] = block_count[a + order[k], r]
+
+
+@kernel
+def merge_repeats(pointer, column, count):  # type: ignore[no-untyped-def]
+    """Add up entries of equal column that stand side by side in a row, in place; returns the entries left.
+
+    pointer (n_row + 1,), column (n,), count (n, n_replicate). Trap: the search for strong components never ends on a
+    graph with repeated edges.
+    """
+    to = 0
+    begin = pointer[0]
+    for i in range(pointer.shape[0] - 1):
+        end = pointer[i + 1]
+        first = to
+        for e in range(begin, end):
+            if to > first and column[to - 1] == column[e]:
+                for r in range(count.shape[1]):
+                    count[to - 1, r] += count[e, r]
+            else:
+                column[to] = column[e]
+                for r in range(count.shape[1]):
+                    count[to, r] = count[e, r]
+                to += 1
+        begin = end
+        pointer[i + 1] = to
+    return to

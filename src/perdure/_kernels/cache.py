@@ -120,7 +120,15 @@ def warm(advance: Callable[..., int], spec: KernelSpec) -> None:
     """Compile (or load) for the one signature in use, on a single lane."""
     d = len(spec.state)
     advance(
-        np.full((d, 1), 0.5), np.zeros((spec.n_sum, 1)), np.zeros((1, d, 1), dtype=np.uint16),
-        np.zeros(1, dtype=np.uint64), np.ones(max(len(spec.parameters), 1)), 1e-3, 1, 1,
-        np.zeros(d), np.ones(d), 52,
+        np.full((d, 1), 0.5),
+        np.zeros((spec.n_sum, 1)),
+        np.zeros((1, d, 1), dtype=np.uint16),
+        np.zeros(1, dtype=np.uint64),
+        np.ones(max(len(spec.parameters), 1)),
+        1e-3,
+        1,
+        1,
+        np.zeros(d),
+        np.ones(d),
+        52.0,
     )

@@ -65,4 +65,30 @@ def kernel(function: F) -> F:
     if folder is None:
         return numba.njit(**options)(function)  # type: ignore[no-any-return]
     with numba_cache(folder):
-        return numba.njit(cache=True, **options)(function)  # type: ignore[no-any-return]
+        return forgiving(numba.njit(cache=True, **options)(function))  # type: ignore[no-any-return]
+
+
+def forgiving(dispatcher: Any) -> Any:
+    """Dispatcher for which a damaged cache entry is a missing one, and one that cannot be written no error.
+
+    Trap: numba's reader raises EOFError, UnpicklingError and others on a truncated file, in every later process.
+    """
+    cache = getattr(dispatcher, "_cache", None)
+    if cache is None:  # NUMBA_DISABLE_JIT gives the plain function
+        return dispatcher
+    load, save = cache.load_overload, cache.save_overload
+
+    def load_overload(*arguments: Any) -> Any:
+        try:
+            return load(*arguments)
+        except Exception:
+            with contextlib.suppress(OSError):
+                cache.flush()
+            return None
+
+    def save_overload(*arguments: Any) -> None:
+        with contextlib.suppress(OSError):
+            save(*arguments)
+
+    cache.load_overload, cache.save_overload = load_overload, save_overload
+    return dispatcher

@@ -126,7 +126,9 @@ def named_random_rows(spec: KernelSpec, rows: list[str], member: int) -> tuple[l
     return normal, sign, uniform
 
 
-def lane_body(spec: KernelSpec, state: list[str], before: list[str], sums: list[str], random: list[str], member: int) -> list[str]:
+def lane_body(
+    spec: KernelSpec, state: list[str], before: list[str], sums: list[str], random: list[str], member: int
+) -> list[str]:
     """One step of one lane: new state, event tests, sums."""
     normal, sign, uniform = named_random_rows(spec, random, member)
     lines = [f"x_{s} = {row}" for s, row in zip(spec.state, state, strict=True)]
@@ -146,7 +148,11 @@ def lane_body(spec: KernelSpec, state: list[str], before: list[str], sums: list[
         ]
     at = 2 * len(spec.events)
     for k, source in enumerate(spec.observables):
-        lines += [f"value = {source}", f"{sums[at + 2 * k]} += value", f"{sums[at + 2 * k + 1]} += value * value"]
+        lines += [
+            f"value = {source}",
+            f"{sums[at + 2 * k]} += value",
+            f"{sums[at + 2 * k + 1]} += value * value",
+        ]
     return lines
 
 
@@ -179,11 +185,13 @@ def module_source(spec: KernelSpec) -> str:
     if random:
         head = [f"if at % {group} == 0:"] if group > 1 else ["if True:"]
         fill = [*head, f"    for lane in range({lanes}):", *indented(fill_lines(spec, random), 2)]
-    tally = [f"slot = buf[{k * lanes} + lane] * axis_scale[{k}] - axis_lower[{k}] * axis_scale[{k}] + 1.0\n"
-             "                    slot = slot if slot > 0.0 else 0.0\n"
-             "                    slot = slot if slot < n_slot - 1.0 else n_slot - 1.0\n"
-             f"                    slots[sample, {k}, first + lane] = np.uint16(slot)"
-             for k in range(len(spec.state))]
+    tally = [
+        f"slot = buf[{k * lanes} + lane] * axis_scale[{k}] - axis_lower[{k}] * axis_scale[{k}] + 1.0\n"
+        "                    slot = slot if slot > 0.0 else 0.0\n"
+        "                    slot = slot if slot < n_slot - 1.0 else n_slot - 1.0\n"
+        f"                    slots[sample, {k}, first + lane] = np.uint16(slot)"
+        for k in range(len(spec.state))
+    ]
     finite = " & ".join(f"(abs({row}) < 1e100)" for row in state)
     store = [f"fine = {finite}", "blown += 0 if fine else 1"]
     store += [f"state[{k}, first + lane] = {row} if fine else np.nan" for k, row in enumerate(state)]

@@ -59,7 +59,10 @@ def left_product(pointer, column, total, inverse, x, y):  # type: ignore[no-unty
 
 @kernel
 def replicate_product(pointer, column, count, x, begin, end, y):  # type: ignore[no-untyped-def]
-    """y[i - begin, r] = sum of counts of replicate r times x over row i; x (n + 2, k), y (end - begin, n_replicate, k)."""
+    """y[i - begin, r] = sum of counts of replicate r times x over row i.
+
+    x (n + 2, k), fills y (end - begin, n_replicate, k).
+    """
     n_replicate, k = count.shape[1], x.shape[1]
     for i in range(begin, end):
         for r in range(n_replicate):
@@ -76,7 +79,10 @@ def replicate_product(pointer, column, count, x, begin, end, y):  # type: ignore
 
 @kernel
 def scatter_product(pointer, column, count, weight, begin, end, y):  # type: ignore[no-untyped-def]
-    """y[column] += sum over rows begin to end and replicates of count * weight; weight (end - begin, n_replicate, k)."""
+    """y[column] += sum of count * weight over rows begin to end and replicates.
+
+    weight (end - begin, n_replicate, k).
+    """
     n_replicate, k = count.shape[1], weight.shape[2]
     for i in range(begin, end):
         for e in range(pointer[i], pointer[i + 1]):

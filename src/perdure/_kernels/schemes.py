@@ -114,7 +114,9 @@ def euler_lines(spec: KernelSpec, normal: list[str], sign: list[str]) -> list[st
     lines = drift_lines(spec, old_point(spec), "a")
     for j, z in enumerate(normal):
         lines += [f"w{j} = root * {z}", *noise_lines(spec, old_point(spec), j, f"b{j}")]
-    return lines + [f"y_{s} = x_{s} + step * a_{s}{kicks(spec, k, 'b{j}_{k} * w{j}')}" for k, s in enumerate(spec.state)]
+    return lines + [
+        f"y_{s} = x_{s} + step * a_{s}{kicks(spec, k, 'b{j}_{k} * w{j}')}" for k, s in enumerate(spec.state)
+    ]
 
 
 def weak2_lines(spec: KernelSpec, normal: list[str], sign: list[str]) -> list[str]:
@@ -136,26 +138,36 @@ def weak2_lines(spec: KernelSpec, normal: list[str], sign: list[str]) -> list[st
     moved = [j for j in range(n) if depends_on(spec, j)]
     for j in moved:
         for suffix, side in (("p", "+"), ("m", "-")):
-            at = [f"x_{s} + step * a_{s}" + (f" {side} root * b{j}_{k}" if k in rows_of(spec, j) and j in own else "")
-                  for k, s in enumerate(spec.state)]
+            at = [
+                f"x_{s} + step * a_{s}" + (f" {side} root * b{j}_{k}" if k in rows_of(spec, j) and j in own else "")
+                for k, s in enumerate(spec.state)
+            ]
             lines += noise_lines(spec, at, j, suffix)
             lines += [f"{suffix}{j}_{k} = {suffix}_{k}" for k in rows_of(spec, j)]
         for k in rows_of(spec, j):
-            lines.append(f"n{j}_{k} = 0.25 * (p{j}_{k} + m{j}_{k} + 2.0 * b{j}_{k}) * w{j}"
-                         f" + 0.25 * (p{j}_{k} - m{j}_{k}) * (w{j} * w{j} - step) / root")
+            lines.append(
+                f"n{j}_{k} = 0.25 * (p{j}_{k} + m{j}_{k} + 2.0 * b{j}_{k}) * w{j}"
+                f" + 0.25 * (p{j}_{k} - m{j}_{k}) * (w{j} * w{j} - step) / root"
+            )
     pairs = sorted({(min(j, r), max(j, r)) for j, r in crossed(spec)})
     for j, r in crossed(spec):
         for suffix, side in (("p", "+"), ("m", "-")):
-            at = [f"x_{s}" + (f" {side} root * b{r}_{k}" if k in rows_of(spec, r) else "")
-                  for k, s in enumerate(spec.state)]
+            at = [
+                f"x_{s}" + (f" {side} root * b{r}_{k}" if k in rows_of(spec, r) else "")
+                for k, s in enumerate(spec.state)
+            ]
             lines += noise_lines(spec, at, j, suffix)
             lines += [f"{suffix}{j}_{k} = {suffix}_{k}" for k in rows_of(spec, j)]
         # V[r, j] of the book is +-step and antisymmetric in its indices
         v = ("" if r > j else "-") + sign[pairs.index((min(j, r), max(j, r)))]
         for k in rows_of(spec, j):
-            lines.append(f"n{j}_{k} = n{j}_{k} + 0.25 * (p{j}_{k} + m{j}_{k} - 2.0 * b{j}_{k}) * w{j}"
-                         f" + 0.25 * (p{j}_{k} - m{j}_{k}) * (w{j} * w{r} + step * {v}) / root")
-    return lines + [f"y_{s} = x_{s} + 0.5 * step * (a_{s} + c_{s}){kicks(spec, k, 'n{j}_{k}')}" for k, s in enumerate(spec.state)]
+            lines.append(
+                f"n{j}_{k} = n{j}_{k} + 0.25 * (p{j}_{k} + m{j}_{k} - 2.0 * b{j}_{k}) * w{j}"
+                f" + 0.25 * (p{j}_{k} - m{j}_{k}) * (w{j} * w{r} + step * {v}) / root"
+            )
+    return lines + [
+        f"y_{s} = x_{s} + 0.5 * step * (a_{s} + c_{s}){kicks(spec, k, 'n{j}_{k}')}" for k, s in enumerate(spec.state)
+    ]
 
 
 def no_needs(spec: KernelSpec) -> tuple[int, int]:

@@ -43,7 +43,8 @@ def box_seeds(seed_low, seed_high, sweep, keys, index, first, n_replicate, base,
     keys (n_box,) int64; index (n_box, n_dim) int64; first (n_box + 1,) int64; base (m, n_dim) uint32: a scrambled
     Sobol set used by every replicate under its own random digital shift (R. Cranley and T. Patterson's idea in
     base 2, as in P. L'Ecuyer and C. Lemieux, 2002, cited from memory), or m = 0 for independent uniform points;
-    ends (n_dim, 2): points stay between them in boxes that straddle an end; fills state (n_dim, n_burst). The 32 bits of the set are topped up to 53 with random bits.
+    ends (n_dim, 2): points stay between them in boxes that straddle an end; fills state (n_dim, n_burst). The 32 bits
+    of the set are topped up to 53 with random bits.
     """
     n_dim = state.shape[0]
     for i in range(keys.shape[0]):

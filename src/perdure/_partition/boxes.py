@@ -11,7 +11,7 @@ from perdure._kernels.rows import locate
 from perdure._kernels.seeds import box_seeds, burst_streams
 from perdure._records import BoxGrid, Floats, Integers
 
-__all__ = ["Boxes", "MOST_KEYS", "hull", "lattice", "tightened"]
+__all__ = ["MOST_KEYS", "Boxes", "hull", "lattice", "tightened"]
 
 # Most boxes on a lattice: keys times replicates must fit in 64 bits.
 MOST_KEYS = 2**56
@@ -50,7 +50,17 @@ class Boxes:
         index = grid.indices(keys)
         word = np.uint64(sweep)
         box_seeds(
-            *self.words, word, keys, index, first, n_replicate, self.base, grid.lower, grid.width, self.ends, state
+            *self.words,
+            word,
+            keys,
+            index,
+            first,
+            n_replicate,
+            self.base,
+            grid.lower,
+            grid.width,
+            self.ends,
+            state,
         )
 
     def fill_streams(self, keys: Integers, first: Integers, sweep: int, stream: NDArray[Any]) -> None:
@@ -99,4 +109,4 @@ def tightened(grid: BoxGrid, keys: Integers) -> tuple[BoxGrid, Integers]:
     low, high = np.where(grid.periodic, 0, low), np.where(grid.periodic, grid.counts - 1, high)
     counts = high - low + 1
     tight = BoxGrid(grid.lower + low * grid.width, grid.width, counts, grid.periodic)
-    return tight, np.ravel_multi_index((index - low).T, tuple(int(n) for n in counts)).astype(np.int64)
+    return tight, np.asarray(np.ravel_multi_index((index - low).T, tuple(int(n) for n in counts))).astype(np.int64)

@@ -54,7 +54,7 @@ class BlockRows:
     count: NDArray[Any]
     sums: Floats
     slot_pointer: Integers
-    slot: NDArray[np.uint16]
+    slot: NDArray[Any]
     slot_count: NDArray[Any]
     n_blown: int
 
@@ -65,7 +65,7 @@ def sobol_base(seed: int, n_dim: int, size: int) -> NDArray[np.uint32]:
 
     n_bits = max(1, int(size - 1).bit_length())
     points = qmc.Sobol(n_dim, scramble=True, bits=32, rng=generator(seed, "sobol")).random_base2(n_bits)[:size]
-    return np.minimum(points * 2.0**32, 2.0**32 - 1).astype(np.uint32)
+    return np.asarray(np.minimum(points * 2.0**32, 2.0**32 - 1).astype(np.uint32))
 
 
 class BurstSampler:
@@ -87,7 +87,13 @@ class BurstSampler:
     """
 
     def __init__(
-        self, advance: Callable[..., int], cells: Starts, plan: Plan, parameters: Floats, n_sum: int, n_interval: int
+        self,
+        advance: Callable[..., int],
+        cells: Starts,
+        plan: Plan,
+        parameters: Floats,
+        n_sum: int,
+        n_interval: int,
     ) -> None:
         self.advance = advance
         self.cells = cells
@@ -143,8 +149,17 @@ class BurstSampler:
         n_slot = self.n_interval + 2
         slots = np.zeros((plan.n_step // plan.stride, n_dim, n_burst), dtype=np.uint16)
         n_blown = self.advance(
-            state, sums, slots, stream, self.parameters, plan.step, plan.n_step, plan.stride,
-            plan.axis_lower, self.axis_scale, float(n_slot),
+            state,
+            sums,
+            slots,
+            stream,
+            self.parameters,
+            plan.step,
+            plan.n_step,
+            plan.stride,
+            plan.axis_lower,
+            self.axis_scale,
+            float(n_slot),
         )
         key, code = np.empty(n_burst, dtype=np.int64), np.empty(n_burst, dtype=np.int64)
         self.cells.locate(state, key)
@@ -191,8 +206,8 @@ class BurstSampler:
         stray = np.flatnonzero((known[at] != key) & (key != BLOWN))
         return stray, state[:, stray]
 
-    def slot_rows(self, slots: NDArray[np.uint16], first: Integers) -> tuple[Integers, NDArray[np.uint16], NDArray[Any]]:
-        n_sample, n_dim, n_burst = slots.shape
+    def slot_rows(self, slots: NDArray[np.uint16], first: Integers) -> tuple[Integers, NDArray[Any], NDArray[Any]]:
+        n_sample, n_dim, _ = slots.shape
         n_box, n_rep, n_slot = len(first) - 1, self.plan.n_replicate, self.n_interval + 2
         most = n_box * min(n_dim * n_slot, n_sample * n_dim * int(np.max(np.diff(first))))
         board = np.zeros((n_dim * n_slot, n_rep), dtype=np.int64)
@@ -207,5 +222,3 @@ def shortest(count: NDArray[Any]) -> NDArray[Any]:
     """Copy in the smallest unsigned type that holds the counts."""
     peak = int(count.max(initial=0))
     return count.astype(np.min_scalar_type(peak))
-
-

@@ -51,15 +51,13 @@ def outside_row(
     size = PARTICLES // n_rep
     key, first = np.array([OUTSIDE]), np.array([0, size * n_rep], dtype=np.int64)
     weight = weight if weight.sum() > 0.0 else np.ones_like(weight)
-    pools = [np.flatnonzero(exits.replicate == r) for r in range(n_rep)]
+    pools = [drawn(np.flatnonzero(exits.replicate == r), weight, rng) for r in range(n_rep)]
     staying: list[Floats] = [np.zeros((len(exits.point), 0)) for _ in range(n_rep)]
     rows, stay = [], []
     for sweep in range(SWEEPS):
         state = np.empty((len(exits.point), size * n_rep))
         for r in range(n_rep):
-            pool = pools[r] if len(pools[r]) else np.arange(len(weight))
-            chance = weight[pool] if weight[pool].sum() > 0.0 else np.ones(len(pool))
-            fresh = rng.choice(pool, size - staying[r].shape[1], p=chance / chance.sum())
+            fresh = rng.choice(pools[r], size - staying[r].shape[1])
             state[:, r * size : (r + 1) * size] = np.concatenate([staying[r], exits.point[:, fresh]], axis=1)
         block = sampler.fly(key, first, state, sweep + 1)
         burst, point = sampler.strays(state, known)
@@ -72,6 +70,12 @@ def outside_row(
     error = np.sqrt(late * (1.0 - late) * 2.0 / (half * size * n_rep))
     settled = bool(abs(late - early) <= 5.0 * error + 0.01 * (1.0 - late))
     return OutsideRow(pooled(rows), len(rows) * size * n_rep, settled)
+
+
+def drawn(pool: Integers, weight: Floats, rng: np.random.Generator) -> Integers:
+    """A sample of exits in proportion to their weights; of all exits if the replicate has none of its own."""
+    pool = pool if len(pool) and weight[pool].sum() > 0.0 else np.arange(len(weight))
+    return np.asarray(rng.choice(pool, 2**15, p=weight[pool] / weight[pool].sum()))
 
 
 def pooled(rows: list[BlockRows]) -> BlockRows:
@@ -91,7 +95,9 @@ def pooled(rows: list[BlockRows]) -> BlockRows:
     )
 
 
-def added(parts: list[tuple[NDArray[np.generic], NDArray[np.generic]]]) -> tuple[Integers, NDArray[np.uint32]]:
+def added(
+    parts: list[tuple[NDArray[np.generic], NDArray[np.generic]]],
+) -> tuple[Integers, NDArray[np.uint32]]:
     """Counts summed by name, names ascending."""
     names = np.concatenate([name for name, _ in parts])
     unique, at = np.unique(names, return_inverse=True)

@@ -93,7 +93,11 @@ def bursts_per_cell(bursts: BurstOptions, n_cell: int, n_step: int) -> tuple[int
         return per_cell, n_replicate, ""
     share = min(STEP_BUDGET / n_step, BURST_BUDGET) / n_cell
     per_cell = int(2 ** np.floor(np.log2(np.clip(share, FEWEST, MOST))))
-    return per_cell, n_replicate, f"at most {STEP_BUDGET:g} steps and {BURST_BUDGET:g} bursts in all, between {FEWEST} and {MOST} per cell"
+    return (
+        per_cell,
+        n_replicate,
+        f"at most {STEP_BUDGET:g} steps and {BURST_BUDGET:g} bursts in all, between {FEWEST} and {MOST} per cell",
+    )
 
 
 def burst_and_step(

@@ -29,11 +29,11 @@ def absorption(transition: Transition, members: tuple[Integers, ...]) -> Floats:
 
     def operator(x: Floats) -> Floats:
         x = x * transient
-        return x - transient * transition.right(x)
+        return np.asarray(x - transient * transition.right(x))
 
     matrix = LinearOperator((n, n), matvec=lambda x: operator(x) + (1.0 - transient) * x, dtype=float)
     columns = [gmres(matrix, column, rtol=1e-10, atol=0.0, restart=50, maxiter=40)[0] for column in push.T]
-    return np.clip(np.stack(columns, axis=1) * transient[:, None] + target, 0.0, 1.0)
+    return np.asarray(np.clip(np.stack(columns, axis=1) * transient[:, None] + target, 0.0, 1.0))
 
 
 def visits(transition: Transition, members: tuple[Integers, ...], start: Floats) -> Floats:

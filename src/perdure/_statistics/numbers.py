@@ -43,9 +43,7 @@ def per_burst(sums: Floats, transition: Transition, plan: Plan, n_event: int) ->
     return np.asarray(sums * scale / transition.tally.bursts[:, :, None])
 
 
-def errors_of(
-    transition: Transition, mass: Floats, h: Floats, means: Floats, mix: Floats
-) -> tuple[Floats, Floats]:
+def errors_of(transition: Transition, mass: Floats, h: Floats, means: Floats, mix: Floats) -> tuple[Floats, Floats]:
     """Standard error and degrees of freedom, shape (n_number,), of linear mixes of the averages.
 
     h (n_cell, n_sum) solves the adjoint equation; means (n_cell, n_replicate, n_sum); mix (n_sum, n_number).
@@ -132,7 +130,11 @@ def mixes(case: CaseRecord, plan: Plan, averages: Averages) -> tuple[Floats, lis
 
 
 def event_result(
-    case: CaseRecord, plan: Plan, averages: Averages, k: int, at: Mapping[tuple[str, int], tuple[float, float]]
+    case: CaseRecord,
+    plan: Plan,
+    averages: Averages,
+    k: int,
+    at: Mapping[tuple[str, int], tuple[float, float]],
 ) -> EventResult:
     """Share, entry rate, return period and mean spell of event `k`."""
     share, entries = float(averages.value[2 * k]), float(averages.value[2 * k + 1])

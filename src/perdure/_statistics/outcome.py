@@ -47,8 +47,6 @@ def outside_quantity(
     plan: Plan, transition: Transition, mass: Floats, has_outside: bool, adjoint: Callable[[Floats], Floats]
 ) -> Quantity:
     """Share of time outside the domain in a regime; an upper bound where no burst left."""
-    if not plan.bounded:
-        return Quantity(0.0, 0.0, 0.0, {"sampling": 0.0}, "1")
     bursts = transition.tally.bursts
     if has_outside and mass[-1] > 0.0:
         is_outside = np.zeros((len(mass), 1))
@@ -56,6 +54,8 @@ def outside_quantity(
         still = np.zeros((*bursts.shape, 1))
         error, freedom = errors_of(transition, mass, adjoint(is_outside), still, np.ones((1, 1)))
         return interval(float(mass[-1]), float(error[0]), float(freedom[0]), "1", "share")
+    if not plan.bounded:
+        return Quantity(0.0, 0.0, 0.0, {"sampling": 0.0}, "1")
     effective = 1.0 / float(np.sum(mass**2 / bursts.sum(axis=1)))
     return Quantity(0.0, 0.0, upper_bound(effective), {"sampling": 0.0}, "1")
 
@@ -112,11 +112,13 @@ def outcome_of(case: CaseRecord, found: Findings) -> tuple[str, tuple[str, ...],
     messages += [line for k, regime in enumerate(regimes) for line in regime_messages(case, found.plan, regime, k + 1)]
     if found.pilot_share < PILOT_LEAST:
         messages.append(
-            f"only {found.pilot_share:.2g} of the pilot's points lie in the cells of the regimes: bursts are too short or "
-            "too few to leave slow cells, and the numbers describe those cells alone; give longer [bursts] duration or "
+            f"only {found.pilot_share:.2g} of the pilot's points lie in the cells of the regimes: bursts are too short "
+            "or too few to leave slow cells, and the numbers describe those cells alone; give longer [bursts] duration or "
             "steps, or more per_cell"
         )
-    passed = found.settled and found.pilot_share >= PILOT_LEAST and all(abs(r.eigenvalue - 1.0) <= 1e-9 for r in regimes)
+    passed = (
+        found.settled and found.pilot_share >= PILOT_LEAST and all(abs(r.eigenvalue - 1.0) <= 1e-9 for r in regimes)
+    )
     if len(regimes) > 1:
         bursts = ", ".join(str(len(r.cell) * found.plan.per_cell) for r in regimes)
         messages.append(

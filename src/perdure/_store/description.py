@@ -125,9 +125,7 @@ def case_from_json(described: str, *, text: str, seed: str) -> CaseRecord:
             Event(e["name"], bare(e["condition"]), None if e["until"] is None else bare(e["until"]))
             for e in data["events"]
         ),
-        observables=tuple(
-            Observable(o["name"], bare(o["expression"]), o["unit"]) for o in data["observables"]
-        ),
+        observables=tuple(Observable(o["name"], bare(o["expression"]), o["unit"]) for o in data["observables"]),
         cells=CellOptions(**known(CellOptions, data["cells"])),
         bursts=BurstOptions(**known(BurstOptions, data["bursts"])),
         output=OutputOptions(**known(OutputOptions, data["output"])),

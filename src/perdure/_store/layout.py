@@ -50,9 +50,7 @@ def attrs(target: h5py.HLObject, **values: Any) -> None:
             continue
         data = np.int8(value) if isinstance(value, bool | np.bool_) else np.asarray(value)
         if data.ndim > 1 or data.dtype.str[1:] not in PLAIN:
-            raise TypeError(
-                f"attribute {key}: {data.ndim}-dimensional {data.dtype} is not a netCDF attribute"
-            )
+            raise TypeError(f"attribute {key}: {data.ndim}-dimensional {data.dtype} is not a netCDF attribute")
         target.attrs.create(key, data)
 
 
@@ -119,9 +117,7 @@ def variable(
 ) -> h5py.Dataset:
     """Create the dataset and join its axes to their scales."""
     if len(dims) != array.ndim or len(set(dims)) < len(dims):
-        raise ValueError(
-            f"{name}: axes {tuple(dims)} for {array.ndim} dimensions; each needs a name of its own"
-        )
+        raise ValueError(f"{name}: axes {tuple(dims)} for {array.ndim} dimensions; each needs a name of its own")
     made = parent.create_dataset(name, data=array, track_order=True, **options)
     if tuple(dims) == (name,):
         made.make_scale(name)
@@ -145,9 +141,7 @@ def stamp(file: h5py.File) -> None:
     file.attrs["_NCProperties"] = np.bytes_(versions.encode())
 
 
-def free_names(
-    wanted: Sequence[str], taken: Iterable[str], suffixes: Sequence[str] = ("",)
-) -> tuple[str, ...]:
+def free_names(wanted: Sequence[str], taken: Iterable[str], suffixes: Sequence[str] = ("",)) -> tuple[str, ...]:
     """Variable names for `wanted` that clash neither with `taken` nor with each other.
 
     A state component may be called "mass" or "cell", which the group already holds: underscores are

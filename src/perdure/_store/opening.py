@@ -50,22 +50,15 @@ def opened(path: str, label: str) -> h5py.File:
             what = "was never finished: its writer was stopped"
         else:
             what = "is damaged"
-        raise DensityFileError(
-            f"{label}: {what} ({why}); restore it from a copy or run the case again"
-        ) from error
+        raise DensityFileError(f"{label}: {what} ({why}); restore it from a copy or run the case again") from error
 
 
 def check_root(root: Mapping[str, Any], label: str) -> None:
     """Refuse HDF5 files that are not finished density files of a known format."""
     if root.get("format") != FORMAT:
-        found = (
-            f"its attribute format is {root['format']!r}"
-            if "format" in root
-            else "it has no attribute format"
-        )
+        found = f"its attribute format is {root['format']!r}" if "format" in root else "it has no attribute format"
         raise DensityFileError(
-            f"{label}: is an HDF5 file but no density file of perdure ({found} instead of {FORMAT!r}); "
-            "check the path"
+            f"{label}: is an HDF5 file but no density file of perdure ({found} instead of {FORMAT!r}); check the path"
         )
     version = root.get("format_version")
     if not isinstance(version, int) or version < 1:
@@ -74,8 +67,7 @@ def check_root(root: Mapping[str, Any], label: str) -> None:
         )
     if version > FORMAT_VERSION:
         raise DensityFileError(
-            f"{label}: has format {version}, this perdure reads formats up to {FORMAT_VERSION}; "
-            "update perdure"
+            f"{label}: has format {version}, this perdure reads formats up to {FORMAT_VERSION}; update perdure"
         )
     if not root.get("complete"):
         raise DensityFileError(

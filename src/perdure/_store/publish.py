@@ -49,9 +49,7 @@ def check_target(path: Path, *, estimate: object | None = None) -> None:
         check_existing(path, target, estimate)
         if not os.path.isdir(folder):
             what = "is not a folder" if os.path.lexists(folder) else "does not exist"
-            raise refusal(
-                path, f"the folder {parent_of(path)!r} {what}", "make it, or give another path", estimate
-            )
+            raise refusal(path, f"the folder {parent_of(path)!r} {what}", "make it, or give another path", estimate)
         sweep(folder, name)
         descriptor, part = create_part(folder, name)
         os.close(descriptor)
@@ -97,12 +95,8 @@ def publishing(path: Path, *, estimate: object | None = None) -> Iterator[tuple[
 
 def refusal(path: Path, cause: str, remedy: str, estimate: object | None) -> OutputError:
     """The error that says why nothing can be written at `path`."""
-    kept = (
-        "" if estimate is None else "; nothing computed is lost: `.estimate` of this error holds the result"
-    )
-    return OutputError(
-        f"{os.fspath(path)}: the density file cannot be written: {cause}; {remedy}{kept}", estimate
-    )
+    kept = "" if estimate is None else "; nothing computed is lost: `.estimate` of this error holds the result"
+    return OutputError(f"{os.fspath(path)}: the density file cannot be written: {cause}; {remedy}{kept}", estimate)
 
 
 def room_left(path: Path) -> int:
@@ -122,9 +116,7 @@ def check_existing(path: Path, target: str, estimate: object | None) -> None:
     if not stat.S_ISREG(mode):
         raise refusal(path, "it is a device or a pipe, not an ordinary file", "give a file name", estimate)
     if not os.access(target, os.W_OK, effective_ids=os.access in os.supports_effective_ids):
-        raise refusal(
-            path, "the file exists and is write-protected", "give another name, or permit writing", estimate
-        )
+        raise refusal(path, "the file exists and is write-protected", "give another name, or permit writing", estimate)
 
 
 def create_part(folder: str, name: str) -> tuple[int, str]:

@@ -234,9 +234,7 @@ class StoredEstimate:
     @cached_property
     def regimes(self) -> tuple[Regime, ...]:
         period = self._array("regimes/period", np.int64)
-        residual, eigenvalue = (
-            self._array(f"regimes/{name}", np.float64) for name in ("residual", "eigenvalue")
-        )
+        residual, eigenvalue = (self._array(f"regimes/{name}", np.float64) for name in ("residual", "eigenvalue"))
         return tuple(
             Regime(
                 weight=self.weights[k],
@@ -261,9 +259,7 @@ class StoredEstimate:
 
     def _group(self, name: str = "/") -> h5py.Group:
         if not self._file:
-            raise DensityFileError(
-                f"{self._label}: this density file was closed; open it again to read more of it"
-            )
+            raise DensityFileError(f"{self._label}: this density file was closed; open it again to read more of it")
         return self._file[name]
 
     def _array(self, name: str, dtype: Any) -> NDArray[Any]:

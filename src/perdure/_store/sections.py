@@ -83,9 +83,7 @@ def put_density(parent: h5py.Group, grid: BoxGrid, keys: Integers, mass: Floats,
     bare_dim(made, "bnds", 2)
     for k, axis in enumerate(axes):
         edges = grid.lower[k] + np.arange(grid.counts[k] + 1) * grid.width[k]
-        put_intervals(
-            made, axis, edges, system.state[k], system.units[k], f"cell centre in {system.state[k]}"
-        )
+        put_intervals(made, axis, edges, system.state[k], system.units[k], f"cell centre in {system.state[k]}")
     put_cell_axis(made, keys)
     attrs(made["cell"], compress=" ".join(axes))
     unit = density_unit(system.units)
@@ -139,9 +137,7 @@ def put_events(parent: h5py.Group, events: Mapping[str, EventResult], case: Case
     put_text(made, "until", [ends.get(name, "") for name in events], ("event",), long_name=label)
 
 
-def put_observables(
-    parent: h5py.Group, observables: Mapping[str, ObservableResult], case: CaseRecord
-) -> None:
+def put_observables(parent: h5py.Group, observables: Mapping[str, ObservableResult], case: CaseRecord) -> None:
     """`observables`: a row per observable."""
     made = group(parent, "observables", long_name="long-run numbers of the observables")
     put_text(made, "observable", observables, ("observable",), long_name="observable name")

@@ -72,9 +72,7 @@ def put_quantities(
     parts = part_names(quantities)
     for part, variable in zip(parts, part_variables(name, parts), strict=True):
         label = f"{long_name}: standard error, part {part}"
-        column(
-            group, variable, [q.parts.get(part) for q in quantities], dims, long_name=label, part=part, **unit
-        )
+        column(group, variable, [q.parts.get(part) for q in quantities], dims, long_name=label, part=part, **unit)
         beside.append(variable)
     if not unit:
         put_text(
@@ -115,9 +113,7 @@ def read_quantities(group: h5py.Group, name: str) -> list[Quantity]:
     beside = str(group[name].attrs["ancillary_variables"]).split(" ")
     parts = {str(group[v].attrs["part"]): floats(group, v) for v in beside if "part" in group[v].attrs}
     n = len(value)
-    units = (
-        texts(group, f"{name}_unit") if f"{name}_unit" in beside else [str(group[name].attrs["units"])] * n
-    )
+    units = texts(group, f"{name}_unit") if f"{name}_unit" in beside else [str(group[name].attrs["units"])] * n
     reasons = texts(group, f"{name}_reason") if f"{name}_reason" in beside else [""] * n
     return [
         Quantity(

@@ -181,9 +181,7 @@ def size_of(estimate: Estimate) -> int:
     n_cell, n_axis = len(estimate.keys), int(np.sum(estimate.grid.counts))
     size = 1_000_000 + len(estimate.case.text) + 36 * n_cell + 16 * len(estimate.plan.seed_keys)
     size += (1 + len(estimate.regimes)) * 24 * n_axis
-    size += sum(
-        24 * len(r.cell) + sum(40 * len(m.mass) for m in r.marginals.values()) for r in estimate.regimes
-    )
+    size += sum(24 * len(r.cell) + sum(40 * len(m.mass) for m in r.marginals.values()) for r in estimate.regimes)
     size += 0 if estimate.basins is None else estimate.basins.nbytes
     if estimate.tally is not None:
         tally = estimate.tally

@@ -9,10 +9,10 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from perdure._kernels.assemble import place_rows
+from perdure._kernels.assemble import merge_repeats, place_rows
 from perdure._records import Floats, Integers, Plan, SlotRows, Tally
 
-__all__ = ["Collected", "RowStore", "with_outside"]
+__all__ = ["Collected", "RowStore", "with_outside", "without"]
 
 
 class Rows(Protocol):
@@ -80,6 +80,8 @@ class RowStore:
         self._sums = []
         bursts = np.full((n, self.n_replicate), plan.per_cell // self.n_replicate, dtype=np.int64)
         tally = Tally(pointer, column, count, bursts)
+        if n_known > n:
+            tally = merged(tally)
         return Collected(tally, sums, SlotRows(*slots, plan.n_step // plan.stride, n_interval))
 
 
@@ -95,12 +97,14 @@ def with_outside(collected: Collected, row: Rows, column: NDArray[np.int32], n_b
     def renamed(names: NDArray[np.int32]) -> NDArray[np.int32]:
         return np.where(names == n + 1, n + 2, names).astype(np.int32)
 
+    order = np.argsort(column, kind="stable")
     grown = Tally(
         np.append(tally.pointer, tally.pointer[-1] + len(column)),
-        np.concatenate([renamed(tally.column), renamed(column)]),
-        np.concatenate([tally.count, row.count]),
+        np.concatenate([renamed(tally.column), renamed(column[order])]),
+        np.concatenate([tally.count, row.count[order]]),
         np.concatenate([tally.bursts, np.full((1, n_rep), n_burst // n_rep)]),
     )
+    grown = merged(grown)
     more = SlotRows(
         np.append(slots.pointer, slots.pointer[-1] + len(row.slot)),
         np.concatenate([slots.column, row.slot]),
@@ -109,6 +113,31 @@ def with_outside(collected: Collected, row: Rows, column: NDArray[np.int32], n_b
         slots.n_interval,
     )
     return Collected(grown, np.concatenate([collected.sums, row.sums]), more)
+
+
+def without(collected: Collected, drop: NDArray[np.bool_]) -> Collected:
+    """Without the cells marked in drop (n_cell,): bursts that ended in one of them ended outside."""
+    tally, slots, keep = collected.tally, collected.slots, ~drop
+    n = int(keep.sum())
+    names = np.full(len(drop) + 2, n, dtype=np.int32)
+    names[:-2][keep] = np.arange(n, dtype=np.int32)
+    names[-1] = n + 1
+    pointer, column, count = kept_rows(tally.pointer, tally.column, tally.count, keep)
+    column = names[column]
+    row = np.repeat(np.arange(n), np.diff(pointer))
+    order = np.lexsort((column, row))
+    kept = merged(Tally(pointer, column[order], count[order], tally.bursts[keep]))
+    more = SlotRows(*kept_rows(slots.pointer, slots.column, slots.count, keep), slots.n_sample, slots.n_interval)
+    return Collected(kept, collected.sums[keep], more)
+
+
+def kept_rows(
+    pointer: Integers, column: NDArray[Any], count: NDArray[Any], keep: NDArray[np.bool_]
+) -> tuple[Integers, NDArray[Any], NDArray[Any]]:
+    """The rows marked in keep (n_row,) of compressed rows."""
+    lengths = np.diff(pointer)
+    entry = np.repeat(keep, lengths)
+    return np.concatenate([[0], np.cumsum(lengths[keep])]), column[entry], count[entry]
 
 
 def joined(
@@ -135,3 +164,12 @@ def joined(
         place_rows(*block, rank[at : at + len(block[0]) - 1], pointer, names, ascending, column, count)
         at += len(block[0]) - 1
     return pointer, column, count
+
+
+def merged(tally: Tally) -> Tally:
+    """Tally whose rows name each column once; its arrays are used up."""
+    # sums of repeats may need one more byte than the counts
+    peak = int(tally.bursts.max(initial=0))
+    count = tally.count.astype(np.promote_types(tally.count.dtype, np.min_scalar_type(peak)), copy=False)
+    n_entry = merge_repeats(tally.pointer, tally.column, count)
+    return Tally(tally.pointer, tally.column[:n_entry], count[:n_entry], tally.bursts)

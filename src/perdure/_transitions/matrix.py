@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+import os
+from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
+
 import numpy as np
 
 from perdure._kernels.products import (
@@ -36,18 +40,25 @@ class TransitionMatrix:
 
     def left(self, mass: Floats) -> Floats:
         """mass @ P, shape (n_cell,) or (n_cell, k)."""
-        x = np.ascontiguousarray(mass.reshape(self.n_cell, -1), dtype=float)
-        y = np.empty((self.n_cell + 2, x.shape[1]))
-        left_product(self.tally.pointer, self.tally.column, self.total, self.inverse, x, y)
-        return y[: self.n_cell].reshape(mass.shape)
+
+        def product(x: Floats) -> Floats:
+            y = np.empty((self.n_cell + 2, x.shape[1]))
+            left_product(self.tally.pointer, self.tally.column, self.total, self.inverse, x, y)
+            return y[: self.n_cell]
+
+        return in_columns(product, mass)
 
     def right(self, values: Floats) -> Floats:
         """P @ values, shape (n_cell,) or (n_cell, k)."""
-        x = np.zeros((self.n_cell + 2, values.size // max(self.n_cell, 1)))
-        x[: self.n_cell] = values.reshape(self.n_cell, -1)
-        y = np.empty((self.n_cell, x.shape[1]))
-        right_product(self.tally.pointer, self.tally.column, self.total, self.inverse, x, 0, self.n_cell, y)
-        return y.reshape(values.shape)
+
+        def product(x: Floats) -> Floats:
+            padded = np.concatenate([x, np.zeros((2, x.shape[1]))])
+            y = np.empty((self.n_cell, x.shape[1]))
+            tally = self.tally
+            right_product(tally.pointer, tally.column, self.total, self.inverse, padded, 0, self.n_cell, y)
+            return y
+
+        return in_columns(product, values)
 
     def leak(self) -> Floats:
         """Probability, shape (n_cell,), of ending outside or blown up."""
@@ -72,6 +83,18 @@ class TransitionMatrix:
         """
         tally = self.tally
         scatter_product(tally.pointer, tally.column, tally.count, weight, begin, begin + len(weight), out)
+
+
+def in_columns(product: Callable[[Floats], Floats], values: Floats) -> Floats:
+    """Product with a vector, or with the columns of a matrix shared out among threads. Same bits either way."""
+    columns = np.ascontiguousarray(values.reshape(len(values), -1), dtype=float)
+    k, n_thread = columns.shape[1], os.cpu_count() or 1
+    if k < 2 * n_thread or n_thread == 1 or columns.size < 100_000:
+        return product(columns).reshape(values.shape)
+    cuts = np.array_split(np.arange(k), n_thread)
+    with ThreadPoolExecutor(n_thread) as pool:
+        parts = pool.map(lambda cut: product(np.ascontiguousarray(columns[:, cut])), cuts)
+        return np.concatenate(list(parts), axis=1)
 
 
 def scattered_slots(slots: SlotRows, weight: Floats, begin: int, out: Floats) -> None:

@@ -274,6 +274,18 @@ def test_a_wrong_table_hides_no_mistake_of_another(refused: Refused) -> None:
     ]  # fmt: skip
 
 
+def test_without_a_state_the_shape_of_events_and_options_is_still_checked(refused: Refused) -> None:
+    problems = refused(
+        "[system]\nkind = 'flow'\n[events.a]\nwhen = 'x > 1'\n[events.b]\nball = {centre = [1], radius = 1}\n"
+        "[events.c]\n[cells]\nlower = [1, 2]\ncount = 0\n[observables]\nn = 'x'\n"
+    )
+    assert [problem.split(": found")[0] for problem in problems] == [
+        "loop.toml, line 1, [system] state",
+        "loop.toml, line 7, [events.c]",
+        "loop.toml, line 10, [cells] count",
+    ]
+
+
 def test_the_list_of_mistakes_is_cut(refused: Refused) -> None:
     problems = refused(OBSERVABLES + "" + "".join(f"n{k} = 3\n" for k in range(60)))
     assert len(problems) == 51

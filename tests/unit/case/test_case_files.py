@@ -314,6 +314,15 @@ def test_expressions_that_are_finite_somewhere_are_allowed(load: Load, equation:
     assert load(MAP.replace("4*x*(1 - x)", equation)).system.equations[0].text == equation
 
 
+def test_expressions_for_positive_states_only_are_allowed(load: Load) -> None:
+    """A trial state with 30 random signs is all positive once in 1e9."""
+    names = [f"n{k}" for k in range(30)]
+    equations = "\n".join(f'{name} = "{" + ".join(f"log({n})" for n in names)}"' for name in names)
+    state = ", ".join(f'"{name}"' for name in names)
+    text = f'[system]\nkind = "map"\nstate = [{state}]\n[system.equations]\n{equations}\n'
+    assert len(load(text).system.equations) == 30
+
+
 def test_a_narrow_region_is_found_with_its_domain(load: Load) -> None:
     text = MAP.replace("4*x*(1 - x)", "sqrt(x - 300)*sqrt(300.001 - x)")
     assert load(text + "[cells]\nlower = [300]\nupper = [300.001]\n").system.state == ("x",)

@@ -100,9 +100,17 @@ def test_a_name_may_be_called_e() -> None:
     assert parse_value("e*x", ("x", "e"), PLACE).source == "(v_e * v_x)"
 
 
-def test_a_long_chain_counts_as_one_level() -> None:
-    expression = parse_value("+".join(["x"] * 250), NAMES, PLACE)
-    assert float(evaluate(expression, {"x": 0.5})) == 125.0
+@pytest.mark.parametrize(
+    ("text", "value"),
+    [
+        ("x" + "+x" * 249, 125.0),
+        ("x" + "-x+x" * 124 + "-x", 0.0),
+        ("x" + "/x*x" * 124, 0.5),
+    ],
+)
+def test_a_long_chain_counts_as_one_level(text: str, value: float) -> None:
+    expression = parse_value(text, NAMES, PLACE)
+    assert float(evaluate(expression, {"x": 0.5})) == value
     compile(expression.source, "source", "eval")
 
 

@@ -23,7 +23,7 @@ with warnings.catch_warnings():
 ENGINES = ["h5netcdf", "netcdf4"]
 
 
-@pytest.fixture(scope="module", params=[0, 1, 2], ids=["leaking", "one", "two"])
+@pytest.fixture(scope="module", params=[0, 2], ids=["leaking", "two"])
 def written(
     request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory
 ) -> tuple[Path, Estimate]:

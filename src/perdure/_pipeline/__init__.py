@@ -1,0 +1,186 @@
+"""The order of the steps, nothing else."""
+
+from __future__ import annotations
+
+import os
+import platform
+import time
+from datetime import UTC, datetime
+from importlib.metadata import version
+
+import numpy as np
+
+import perdure
+from perdure._pipeline.prepare import Prepared, prepare
+from perdure._pipeline.sampled import Sampled, sample_all
+from perdure._pipeline.watch import Clock, Progress, silent
+from perdure._records import CaseRecord, Estimate, Integers, Plan, Quantity, Regime
+from perdure._result import Result
+from perdure._sampling import kernel_for
+from perdure._spectrum import ClassSolver, absorption, period_of, visits
+from perdure._statistics import (
+    Findings,
+    marginal_numbers,
+    no_share,
+    outcome_of,
+    outside_quantity,
+    regime_numbers,
+    regime_weights,
+)
+from perdure._streams import generator
+from perdure._transitions import TransitionMatrix, scattered_slots
+
+__all__ = ["estimate", "forecast_cost", "plan"]
+
+
+def plan(case: CaseRecord) -> Plan:
+    """What `estimate` would run, from the case and a pilot run; nothing is estimated."""
+    return prepare(case, silent, Clock()).plan
+
+
+def forecast_cost(case: CaseRecord, made: Plan) -> dict[str, float]:
+    """Expected cells, bursts, steps, peak memory (bytes) and time (seconds on this machine) of a run."""
+    ready = Prepared(case, *kernel_for(case), made)
+    flight, n_sum = ready.flight, ready.n_sum
+    cells = int(1.2 * len(made.seed_keys))
+    bursts = cells * made.per_cell
+    centres = np.ascontiguousarray(made.grid.centres(made.seed_keys[:4096]).T)
+    state = np.repeat(centres, max(1, 4096 // centres.shape[1]), axis=1)
+    begun = time.perf_counter()
+    flight.fly(state, made.step, made.n_step)
+    rate = state.shape[1] * made.n_step / (time.perf_counter() - begun)
+    steps = bursts * made.n_step
+    entries = min(bursts, cells * 64)
+    memory = 2.5e8 + entries * (8 + 2 * made.n_replicate) + cells * (made.n_replicate * n_sum * 24 + 800)
+    seconds = 2.0 + 1.8 * steps / rate / max(os.cpu_count() or 1, 1) + entries * 1e-6
+    return {"cells": cells, "bursts": bursts, "steps": steps, "memory_bytes": memory, "seconds": seconds}
+
+
+def estimate(case: CaseRecord, *, workers: int | None = None, progress: Progress | None = None) -> Result:
+    """Long-run statistics of a case: what ``perdure run`` computes.
+
+    Parameters
+    ----------
+    case : Case
+    workers : int or None
+        Threads; all processors if None. The numbers do not depend on it, to the last bit.
+    progress : callable or None
+        Called as progress(stage, done, total).
+
+    Returns
+    -------
+    Result
+        Wraps an `Estimate`; several regimes or a leaking domain are outcomes in it, not errors.
+
+    Raises
+    ------
+    CaseError
+        The case cannot be run as written.
+    NoAttractorError
+        Every pilot trajectory left all bounds.
+    NotConvergedError
+        A solve stopped above its tolerance.
+    """
+    report, clock = progress or silent, Clock()
+    ready, done, classes = sample_all(prepare(case, report, clock), workers or os.cpu_count() or 1, report)
+    clock.stage("bursts")
+    transition = TransitionMatrix(done.all.tally)
+    n = len(done.keys)
+    members = [cells for cells in classes.members if cells[0] < n]
+    basins = absorption(transition, tuple(members)) if len(members) > 1 or classes.leaks.any() else None
+    weights = regime_weights(transition, tuple(members), basins, visits, n)
+    regimes, outside = [], []
+    for k, cells in enumerate(members):
+        report("regime", k, len(members))
+        regime, share = regime_of(ready, done, transition, cells, weights[k], clock)
+        regimes.append(regime)
+        outside.append(share)
+    order = sorted(range(len(regimes)), key=lambda k: -(regimes[k].weight.value or 0.0))
+    state = Findings(
+        ready.plan,
+        done.counts,
+        [regimes[k] for k in order],
+        classes.leaks,
+        done.settled,
+        pilot_share(ready.plan, done, members),
+    )
+    outcome, messages, passed = outcome_of(case, state)
+    if outcome == "leaking":
+        order = []
+    report("done", 1, 1)
+    return Result(
+        Estimate(
+            case=case,
+            plan=ready.plan,
+            outcome=outcome,
+            messages=messages,
+            checks_passed=passed,
+            grid=done.grid,
+            keys=done.keys,
+            regimes=tuple(regimes[k] for k in order),
+            basins=None if basins is None else basins[:n, order].astype(np.float32),
+            outside_share=outside[order[0]] if order else no_share(),
+            tally=done.all.tally if case.output.matrix else None,
+            timings=clock.seconds,
+            packages=versions(),
+            counts=done.counts,
+            created=datetime.now(UTC).isoformat(timespec="seconds"),
+        )
+    )
+
+
+def pilot_share(made: Plan, done: Sampled, members: list[Integers]) -> float:
+    """Part of the pilot's points that lie in the cells of the regimes."""
+    held = (
+        done.lattice_keys[np.concatenate([cells[cells < len(done.keys)] for cells in members])]
+        if members
+        else made.seed_keys[:0]
+    )
+    return float(made.seed_share[np.isin(made.seed_keys, held)].sum())
+
+
+def regime_of(
+    ready: Prepared,
+    done: Sampled,
+    transition: TransitionMatrix,
+    members: Integers,
+    weight: Quantity,
+    clock: Clock,
+) -> tuple[Regime, Quantity]:
+    """Stationary mass and long-run numbers of one closed class, and its share of time outside."""
+    case, found = ready.case, done.all
+    solver = ClassSolver(transition, members)
+    clock.stage("stationary mass")
+    events, observables = regime_numbers(case, ready.plan, transition, solver.mass, found.sums, solver.adjoint)
+    share = outside_quantity(ready.plan, transition, solver.mass, done.has_outside, solver.adjoint)
+    clock.stage("numbers")
+    marginals = marginal_numbers(
+        case.system,
+        ready.plan,
+        transition,
+        found.slots,
+        solver.mass,
+        solver.response,
+        scattered_slots,
+        generator(case.seed, "signs"),
+    )
+    clock.stage("marginals")
+    inside = members[members < len(done.keys)]
+    regime = Regime(
+        weight=weight,
+        cell=inside,
+        mass=solver.mass[inside],
+        period=period_of(found.tally, members),
+        residual=solver.residual,
+        eigenvalue=solver.eigenvalue,
+        events=events,
+        observables=observables,
+        marginals=marginals,
+    )
+    return regime, share
+
+
+def versions() -> dict[str, str]:
+    """Versions of what the numbers rest on."""
+    own = {"perdure": perdure.__version__, "Python": platform.python_version()}
+    return own | {name: version(name) for name in ("numpy", "scipy", "numba", "h5py")}

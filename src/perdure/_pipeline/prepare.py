@@ -1,0 +1,107 @@
+"""From a case to a plan: compile, fly the pilot, choose."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from perdure._kernels.rows import OUTSIDE
+from perdure._partition import Boxes, lattice
+from perdure._pipeline.watch import Clock, Progress
+from perdure._records import BoxGrid, CaseRecord, Floats, Integers, Plan
+from perdure._sampling import (
+    Domain,
+    Flight,
+    boxes_per_axis,
+    domain,
+    kernel_for,
+    make_plan,
+    parameter_values,
+    scheme_of,
+    sobol_base,
+    survey,
+)
+from perdure._streams import generator, seed_words
+from perdure.errors import CaseError
+
+__all__ = ["Prepared", "prepare"]
+
+
+@dataclass(frozen=True)
+class Prepared:
+    """A case with its compiled kernel and its plan."""
+
+    case: CaseRecord
+    advance: Callable[..., int]
+    n_sum: int
+    plan: Plan
+
+    @property
+    def flight(self) -> Flight:
+        return Flight(self.advance, parameter_values(self.case), self.n_sum, generator(self.case.seed, "pilot"))
+
+    @property
+    def cells(self) -> Boxes:
+        made = self.plan
+        size = made.per_cell // made.n_replicate if self.case.bursts.seeds == "sobol" else 0
+        return boxes(self.case, made.grid, (made.axis_lower, made.axis_upper), size)
+
+
+def boxes(case: CaseRecord, grid: BoxGrid, ends: tuple[Floats, Floats], size: int) -> Boxes:
+    """Discretiser of a case, with a Sobol set of `size` points (none for 0)."""
+    base = sobol_base(case.seed, grid.n_dim, size) if size else np.zeros((0, grid.n_dim), dtype=np.uint32)
+    return Boxes(grid, seed_words(case.seed, "bursts"), base, np.stack(ends, axis=1))
+
+
+def prepare(case: CaseRecord, progress: Progress, clock: Clock) -> Prepared:
+    """Compile, fly the pilot, plan."""
+    progress("compile", 0, 1)
+    advance, n_sum = kernel_for(case)
+    clock.stage("compile")
+    progress("pilot", 0, 1)
+    flight = Flight(advance, parameter_values(case), n_sum, generator(case.seed, "pilot"))
+    pilot = survey(flight, case.system, case.cells, case.bursts)
+    ends = domain(case.system, case.cells, pilot)
+    if not np.all(ends.lower < ends.upper):
+        worst = case.system.state[int(np.argmin(ends.upper - ends.lower))]
+        raise CaseError(
+            f"{case.source_name}, [cells] component {worst!r}: the end that was given lies beyond the states of the "
+            "pilot run; give both lower and upper, or neither"
+        )
+    counts, why = boxes_per_axis(case.system, case.cells, pilot)
+    grid = make_grid(case, ends, counts)
+    found = {} if ends.given.all() else {"domain": "range of the pilot run; the cover grows by arrivals"}
+    if (ends.closed & ~ends.given).any():
+        found["domain"] = "twice the middle 99 percent of the pilot run (heavy tails); beyond is the outside state"
+    if not case.cells.counts:
+        found["cells"] = why
+    keys = np.empty(pilot.points.shape[1], dtype=np.int64)
+    boxes(case, grid, (ends.lower, ends.upper), 0).locate(np.ascontiguousarray(pilot.points), keys)
+    visited = np.unique(keys[keys < OUTSIDE], return_counts=True)
+    if not len(visited[0]):
+        raise CaseError(
+            f"{case.source_name}, [cells] lower, upper: no state of the pilot run lies inside; the long run covers "
+            f"{span(case, pilot.points)}; widen the domain or leave it out"
+        )
+    made = make_plan(case, pilot, flight, scheme_of(case), grid, ends, visited, found)
+    clock.stage("pilot")
+    return Prepared(case, advance, n_sum, made)
+
+
+def make_grid(case: CaseRecord, ends: Domain, counts: Integers) -> BoxGrid:
+    """Lattice of the case: closed at the ends that are so, open elsewhere.
+
+    At an open end the last box reaches a quarter of a box further, so that arrivals a little beyond the pilot's
+    extreme do not start a new box, most of which may lie beyond a sharp edge of the long run.
+    """
+    margin = np.where(ends.closed.T, 0.0, 0.25 * (ends.upper - ends.lower) / counts)
+    periodic = np.array([s in case.cells.periodic for s in case.system.state])
+    return lattice(ends.lower - margin[0], ends.upper + margin[1], counts, ends.closed, periodic)
+
+
+def span(case: CaseRecord, points: Floats) -> str:
+    """Range of each component in words."""
+    ends = zip(case.system.state, points.min(axis=1), points.max(axis=1), strict=True)
+    return ", ".join(f"{low:.4g} <= {s} <= {high:.4g}" for s, low, high in ends)

@@ -1,0 +1,145 @@
+"""All bursts of a run: the cover, the outside state, the boxes between regimes."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from perdure._kernels.rows import BLOWN
+from perdure._partition import Cover, hull, tightened
+from perdure._pipeline.prepare import Prepared
+from perdure._pipeline.watch import Progress
+from perdure._records import BoxGrid, Exits, Integers
+from perdure._sampling import BurstSampler, bursts_per_cell, outside_row, parameter_values
+from perdure._spectrum import Classes, ClassSolver, closed_classes
+from perdure._streams import generator
+from perdure._transitions import Collected, RowStore, TransitionMatrix, with_outside, without
+
+__all__ = ["Sampled", "sample", "sample_all"]
+
+# The cover grows to so many times the cells of the pilot; what goes further is the outside state. It stops too
+# beyond so many steps, and the boxes between regimes are filled in up to so many.
+GROWTH, MOST_STEPS, MOST_HULL = 2, 2e10, 2**17
+
+
+@dataclass(frozen=True)
+class Sampled:
+    """The finished bursts; `all` has the cells in the order of their keys, then the outside state if it has a row."""
+
+    grid: BoxGrid
+    keys: Integers
+    lattice_keys: Integers
+    all: Collected
+    counts: Mapping[str, int]
+    settled: bool = True
+
+    @property
+    def has_outside(self) -> bool:
+        return self.all.tally.n_cell > len(self.keys)
+
+
+def sampler_of(ready: Prepared) -> BurstSampler:
+    values = parameter_values(ready.case)
+    return BurstSampler(ready.advance, ready.cells, ready.plan, values, ready.n_sum, ready.case.output.intervals)
+
+
+def sample(ready: Prepared, workers: int, progress: Progress) -> Sampled:
+    """Send bursts from the cover, add the cells they reach, until it is closed."""
+    made, sampler = ready.plan, sampler_of(ready)
+    cover = Cover(int(min(GROWTH * len(made.seed_keys) + 4096, float(np.prod(made.grid.counts.astype(float))))))
+    store = RowStore(made.n_replicate)
+    frontier, waves, used = cover.add(made.seed_keys), 0, 0
+    while len(frontier) and (waves == 0 or (used + len(frontier)) * made.per_cell * made.n_step < MOST_STEPS):
+        found, done = [], 0
+        for block in sampler.run(frontier, workers=workers):
+            found.append(cover.add(block.target))
+            ids = cover.ids(block.target, -2)
+            ids[block.target == BLOWN] = -1
+            store.add(block, ids)
+            done += len(block.keys)
+            progress("bursts", done, len(frontier))
+        used, waves, frontier = used + len(frontier), waves + 1, np.concatenate(found)
+    keys = cover.keys[:used]
+    order = np.argsort(keys, kind="stable")
+    collected = store.finish(order, made, ready.case.output.intervals, cover.count)
+    keys = keys[order]
+    drop = doomed(TransitionMatrix(collected.tally), ~np.isin(keys, made.seed_keys))
+    if drop.any():
+        collected, keys, used = without(collected, drop), keys[~drop], int(np.sum(~drop))
+    grid, tight = tightened(made.grid, keys)
+    column, count = collected.tally.column, collected.tally.count
+    counts = {
+        "cells": used, "bursts": used * made.per_cell, "steps": used * made.per_cell * made.n_step,
+        "entries": len(column), "outside": int(count[column == used].sum()),
+        "blown_up": int(count[column == used + 1].sum()), "waves": waves,
+    }  # fmt: skip
+    return Sampled(grid, tight, keys, collected, counts)
+
+
+def doomed(transition: TransitionMatrix, grown: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Cells, among those that growth added, that send 5 percent of their bursts to blow up or to such cells.
+
+    Seeds laid uniformly in a cell that straddles the edge of the long run start beyond it, and their ruin is not the
+    system's. What arrives in such a cell is left to the outside state, which follows arrivals themselves.
+    """
+    tally = transition.tally
+    lost = tally.column == tally.n_cell + 1
+    row = np.searchsorted(tally.pointer, np.flatnonzero(lost), side="right") - 1
+    ruin = np.zeros(tally.n_cell)
+    np.add.at(ruin, row, tally.count[lost].sum(axis=1))
+    ruin *= transition.inverse
+    drop = np.zeros(tally.n_cell, dtype=bool)
+    while True:
+        more = grown & (ruin + transition.right(drop.astype(float)) >= 0.05)
+        if np.array_equal(more, drop):
+            return drop
+        drop = more
+
+
+def follow_outside(ready: Prepared, done: Sampled, progress: Progress) -> Sampled:
+    """Give the outside state a row, if bursts left the cover: its particles weighted by a first solve."""
+    tally, n = done.all.tally, len(done.keys)
+    leaving = np.unique(np.searchsorted(tally.pointer, np.flatnonzero(tally.column == n), side="right") - 1)
+    if not len(leaving):
+        return done
+    sampler, rng = sampler_of(ready), generator(ready.case.seed, "outside")
+    point, origin, replicate = sampler.exits(done.lattice_keys[leaving], done.lattice_keys)
+    exits = Exits(point, leaving[origin], replicate)
+    weight, grown, settled = np.ones(len(origin)), done.all, True
+    for round_number in range(2):
+        progress("outside", round_number, 2)
+        found = outside_row(sampler, exits, done.lattice_keys, weight, rng)
+        at = np.minimum(np.searchsorted(done.lattice_keys, found.row.target), n - 1)
+        known = done.lattice_keys[at] == found.row.target
+        column = np.where(known, at, np.where(found.row.target == BLOWN, n + 1, n))
+        grown, settled = (
+            with_outside(done.all, found.row, column.astype(np.int32), found.n_burst),
+            found.settled,
+        )
+        classes = closed_classes(grown.tally)
+        if not classes.members or round_number:
+            break
+        mass = ClassSolver(TransitionMatrix(grown.tally), classes.members[0]).mass
+        weight = mass[exits.cell] / tally.bursts.sum(axis=1)[exits.cell]
+    return replace(done, all=grown, settled=settled)
+
+
+def sample_all(ready: Prepared, workers: int, progress: Progress) -> tuple[Prepared, Sampled, Classes]:
+    """All bursts of a run. With several regimes the boxes between them are sent bursts too, for the basins."""
+    done = follow_outside(ready, sample(ready, workers, progress), progress)
+    classes = closed_classes(done.all.tally)
+    if len(classes.members) < 2:
+        return ready, done, classes
+    between = hull(ready.plan.grid, done.lattice_keys, MOST_HULL)
+    if between is None or len(between) == len(done.keys):
+        return ready, done, classes
+    per_cell, n_replicate, _ = bursts_per_cell(ready.case.bursts, len(between), ready.plan.n_step)
+    share = np.zeros(len(between))
+    share[np.searchsorted(between, ready.plan.seed_keys)] = ready.plan.seed_share
+    made = replace(ready.plan, seed_keys=between, seed_share=share, per_cell=per_cell, n_replicate=n_replicate)
+    ready = replace(ready, plan=made)
+    done = follow_outside(ready, sample(ready, workers, progress), progress)
+    return ready, done, closed_classes(done.all.tally)

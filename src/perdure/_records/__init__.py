@@ -1,0 +1,61 @@
+"""Frozen records that the rooms hand each other. Data only: no room's work is done here."""
+
+from perdure._records.case import (
+    KINDS,
+    BurstOptions,
+    CaseRecord,
+    CellOptions,
+    Event,
+    Expression,
+    Observable,
+    OutputOptions,
+    Parameter,
+    System,
+)
+from perdure._records.engine import (
+    BoxGrid,
+    Exits,
+    Floats,
+    Integers,
+    Plan,
+    SlotRows,
+    Tally,
+    Transition,
+    density_unit,
+)
+from perdure._records.results import (
+    Estimate,
+    EventResult,
+    Marginal,
+    ObservableResult,
+    Quantity,
+    Regime,
+)
+
+__all__ = [
+    "KINDS",
+    "BoxGrid",
+    "BurstOptions",
+    "CaseRecord",
+    "CellOptions",
+    "Estimate",
+    "Event",
+    "EventResult",
+    "Exits",
+    "Expression",
+    "Floats",
+    "Integers",
+    "Marginal",
+    "Observable",
+    "ObservableResult",
+    "OutputOptions",
+    "Parameter",
+    "Plan",
+    "Quantity",
+    "Regime",
+    "SlotRows",
+    "System",
+    "Tally",
+    "Transition",
+    "density_unit",
+]

@@ -1,0 +1,163 @@
+"""What a run found."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from perdure._records.case import CaseRecord
+from perdure._records.engine import BoxGrid, Floats, Integers, Plan, Tally
+
+
+@dataclass(frozen=True)
+class Quantity:
+    """A number with its 95 percent interval and the parts of its error.
+
+    Attributes
+    ----------
+    value, low, high : float or None
+        None where there is no number; then `reason` says why. For an event never seen `value` is None,
+        `low` 0 and `high` an upper bound.
+    parts : mapping of str to float
+        Standard errors by part of the error budget ("sampling", ...). Same unit as `value`.
+    unit : str
+        "1" where it has none.
+    reason : str
+        Empty for an ordinary number.
+    """
+
+    value: float | None
+    low: float | None
+    high: float | None
+    parts: Mapping[str, float] = field(default_factory=dict)
+    unit: str = "1"
+    reason: str = ""
+
+    @property
+    def error(self) -> float | None:
+        """Standard error: the parts added in quadrature. None without a value."""
+        if self.value is None:
+            return None
+        return float(np.sqrt(sum(part * part for part in self.parts.values())))
+
+
+@dataclass(frozen=True)
+class EventResult:
+    """Long-run numbers of one event. Return period and mean spell are in the time unit of the system."""
+
+    share: Quantity
+    entry_rate: Quantity
+    return_period: Quantity
+    mean_spell: Quantity
+
+    @property
+    def probability(self) -> Quantity:
+        """The share of time spent in the event."""
+        return self.share
+
+
+@dataclass(frozen=True)
+class ObservableResult:
+    """Long-run mean and variance of an observable."""
+
+    mean: Quantity
+    variance: Quantity
+
+
+@dataclass(frozen=True)
+class Marginal:
+    """Histogram of one state component along the bursts.
+
+    `edges` has shape (n + 1,), unit of the component; `mass` and `error` (standard error) have shape (n,), no
+    unit; `below` and `above` are the masses beyond the two ends.
+    """
+
+    edges: Floats
+    mass: Floats
+    error: Floats
+    below: float
+    above: float
+    unit: str = "1"
+
+
+@dataclass(frozen=True)
+class Regime:
+    """One closed class of cells and its long-run numbers.
+
+    Attributes
+    ----------
+    weight : Quantity
+        Probability of ending in this regime from a start uniform over the cells of the cover.
+    cell : ndarray of int64, shape (n,)
+        Indices (into `Estimate.keys`) of the cells of the class, ascending.
+    mass : ndarray, shape (n,)
+        Stationary mass of those cells; sums to one less the share of time outside the domain.
+    period : int
+        Greatest common divisor of the lengths of its cycles; 1 for an aperiodic chain.
+    residual : float
+        1-norm of mass @ P - mass.
+    eigenvalue : float
+        Rayleigh quotient sum(mass @ P) / sum(mass): 1 up to rounding in a closed class.
+    """
+
+    weight: Quantity
+    cell: Integers
+    mass: Floats
+    period: int
+    residual: float
+    eigenvalue: float
+    events: Mapping[str, EventResult]
+    observables: Mapping[str, ObservableResult]
+    marginals: Mapping[str, Marginal]
+
+
+@dataclass(frozen=True)
+class Estimate:
+    """Everything a run found; what the density file holds.
+
+    Attributes
+    ----------
+    outcome : str
+        "one-regime", "several-regimes", "periodic" or "leaking".
+    messages : tuple of str
+        Plain sentences that explain the outcome and every stated check that failed.
+    checks_passed : bool
+        False sets exit status 1.
+    grid : BoxGrid
+        Tight around the cells used.
+    keys : ndarray of int64, shape (n_cell,)
+        Row-major keys in `grid`, ascending: the fixed order of the cells.
+    regimes : tuple of Regime
+        Largest weight first; empty when the domain leaks without a closed class.
+    basins : ndarray of float32, shape (n_cell, n_regime), or None
+        Probability of ending in each regime from each cell; None with a single regime and no leak.
+    outside_share : Quantity
+        Share of time outside the domain in the first regime.
+    tally : Tally or None
+    timings : mapping of str to float
+        Seconds per stage.
+    packages : mapping of str to str
+        Versions.
+    counts : mapping of str to int
+        bursts, steps, entries, blown_up, outside, waves.
+    """
+
+    case: CaseRecord
+    plan: Plan
+    outcome: str
+    messages: tuple[str, ...]
+    checks_passed: bool
+    grid: BoxGrid
+    keys: Integers
+    regimes: tuple[Regime, ...]
+    basins: NDArray[np.float32] | None
+    outside_share: Quantity
+    tally: Tally | None
+    timings: Mapping[str, float]
+    packages: Mapping[str, str]
+    counts: Mapping[str, int]
+    command: str = ""
+    created: str = ""
