@@ -42,7 +42,7 @@ def forecast_cost(case: CaseRecord, made: Plan) -> dict[str, float]:
     """Expected cells, bursts, steps, peak memory (bytes) and time (seconds on this machine) of a run."""
     ready = Prepared(case, *kernel_for(case), made)
     flight, n_sum = ready.flight, ready.n_sum
-    cells = int(1.2 * len(made.seed_keys))
+    cells = int(1.2 * made.pilot["cells_expected"])
     bursts = cells * made.per_cell
     centres = np.ascontiguousarray(made.grid.centres(made.seed_keys[:4096]).T)
     state = np.repeat(centres, max(1, 4096 // centres.shape[1]), axis=1)

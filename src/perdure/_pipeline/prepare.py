@@ -7,15 +7,17 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from perdure._kernels.rows import OUTSIDE
 from perdure._partition import Boxes, lattice
 from perdure._pipeline.watch import Clock, Progress
 from perdure._records import BoxGrid, CaseRecord, Floats, Integers, Plan
 from perdure._sampling import (
     Domain,
     Flight,
+    Pilot,
+    Visited,
     boxes_per_axis,
     domain,
+    further,
     kernel_for,
     make_plan,
     parameter_values,
@@ -27,6 +29,9 @@ from perdure._streams import generator, seed_words
 from perdure.errors import CaseError
 
 __all__ = ["Prepared", "prepare"]
+
+# Points after which the pilot stops looking for more cells.
+MOST_POINTS = 6_000_000
 
 
 @dataclass(frozen=True)
@@ -77,10 +82,8 @@ def prepare(case: CaseRecord, progress: Progress, clock: Clock) -> Prepared:
         found["domain"] = "twice the middle 99 percent of the pilot run (heavy tails); beyond is the outside state"
     if not case.cells.counts:
         found["cells"] = why
-    keys = np.empty(pilot.points.shape[1], dtype=np.int64)
-    boxes(case, grid, (ends.lower, ends.upper), 0).locate(np.ascontiguousarray(pilot.points), keys)
-    visited = np.unique(keys[keys < OUTSIDE], return_counts=True)
-    if not len(visited[0]):
+    visited = visited_cells(case, boxes(case, grid, (ends.lower, ends.upper), 0), pilot, flight)
+    if not len(visited.keys):
         raise CaseError(
             f"{case.source_name}, [cells] lower, upper: no state of the pilot run lies inside; the long run covers "
             f"{span(case, pilot.points)}; widen the domain or leave it out"
@@ -88,6 +91,18 @@ def prepare(case: CaseRecord, progress: Progress, clock: Clock) -> Prepared:
     made = make_plan(case, pilot, flight, scheme_of(case), grid, ends, visited, found)
     clock.stage("pilot")
     return Prepared(case, advance, n_sum, made)
+
+
+def visited_cells(case: CaseRecord, cells: Boxes, pilot: Pilot, flight: Flight) -> Visited:
+    """Cells of the pilot's points; it flies on while more than a tenth of them were met only once."""
+    points, last, found = pilot.points, pilot.last, Visited.none()
+    while True:
+        keys = np.empty(points.shape[1], dtype=np.int64)
+        cells.locate(np.ascontiguousarray(points), keys)
+        found = found.joined(keys)
+        if found.seldom <= 0.1 * len(found.keys) or found.n_point >= MOST_POINTS:
+            return found
+        points, last = further(flight, case.system, last, pilot.step)
 
 
 def make_grid(case: CaseRecord, ends: Domain, counts: Integers) -> BoxGrid:

@@ -49,7 +49,9 @@ def sampler_of(ready: Prepared) -> BurstSampler:
 def sample(ready: Prepared, workers: int, progress: Progress) -> Sampled:
     """Send bursts from the cover, add the cells they reach, until it is closed."""
     made, sampler = ready.plan, sampler_of(ready)
-    cover = Cover(int(min(GROWTH * len(made.seed_keys) + 4096, float(np.prod(made.grid.counts.astype(float))))))
+    cover = Cover(
+        int(min(GROWTH * int(made.pilot["cells_expected"]) + 4096, float(np.prod(made.grid.counts.astype(float)))))
+    )
     store = RowStore(made.n_replicate)
     frontier, waves, used = cover.add(made.seed_keys), 0, 0
     while len(frontier) and (waves == 0 or (used + len(frontier)) * made.per_cell * made.n_step < MOST_STEPS):

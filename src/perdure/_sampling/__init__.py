@@ -3,8 +3,8 @@
 from perdure._sampling.bursts import BlockRows, BurstSampler, sobol_base
 from perdure._sampling.kernels import kernel_for, parameter_values, scheme_of
 from perdure._sampling.outside import OutsideRow, outside_row
-from perdure._sampling.pilot import Flight, Pilot, survey
-from perdure._sampling.planning import Domain, boxes_per_axis, bursts_per_cell, domain, make_plan
+from perdure._sampling.pilot import Flight, Pilot, further, survey
+from perdure._sampling.planning import Domain, Visited, boxes_per_axis, bursts_per_cell, domain, make_plan
 
 __all__ = [
     "BlockRows",
@@ -13,9 +13,11 @@ __all__ = [
     "Flight",
     "OutsideRow",
     "Pilot",
+    "Visited",
     "boxes_per_axis",
     "bursts_per_cell",
     "domain",
+    "further",
     "kernel_for",
     "make_plan",
     "outside_row",

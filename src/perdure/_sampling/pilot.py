@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from perdure._records import BurstOptions, CellOptions, Floats, System
 from perdure.errors import NoAttractorError
 
-__all__ = ["Flight", "Pilot", "burst_length", "local_rate", "survey", "time_step"]
+__all__ = ["Flight", "Pilot", "burst_length", "further", "local_rate", "survey", "time_step"]
 
 Advance = Callable[..., int]
 
@@ -189,14 +189,7 @@ def survey(flight: Flight, system: System, cells: CellOptions, bursts: BurstOpti
             "bounds or became non-finite; allowed: a system with a bounded long run; check the equations and "
             "parameters, or give [cells] lower and upper so that the starts lie in the basin"
         )
-    stride = 25 if system.is_flow else 1
-    records = np.full((N_RECORD, *state.shape), np.nan)
-    for record in records:
-        if system.kind == "map":
-            state = refilled(state, flight.rng)
-        state = flight.fly(state, step, stride)
-        record[:] = state
-    records = records[:, :, np.isfinite(records).all(axis=(0, 1))]
+    records = recorded(flight, system, state, step)
     settled = ~travelling(records)
     records = records[:, :, settled] if settled.sum() >= 2 else records
     n_kept = records.shape[2]
@@ -204,6 +197,24 @@ def survey(flight: Flight, system: System, cells: CellOptions, bursts: BurstOpti
     own = np.ptp(records, axis=0).max(axis=1)
     at_rest = bool(np.all(own <= 1e-3 * np.ptp(points, axis=1)))
     return Pilot(points, records[-1], rate, step, N_START, n_kept, at_rest)
+
+
+def recorded(flight: Flight, system: System, state: Floats, step: float) -> Floats:
+    """States along trajectories from state (n_dim, n), (N_RECORD, n_dim, n kept); those that blow up are left out."""
+    stride = 25 if system.is_flow else 1
+    records = np.full((N_RECORD, *state.shape), np.nan)
+    for record in records:
+        if system.kind == "map":
+            state = refilled(state, flight.rng)
+        state = flight.fly(state, step, stride)
+        record[:] = state
+    return np.asarray(records[:, :, np.isfinite(records).all(axis=(0, 1))])
+
+
+def further(flight: Flight, system: System, last: Floats, step: float) -> tuple[Floats, Floats]:
+    """More points (n_dim, n) along the trajectories that stand at `last`, and where they stand then."""
+    records = recorded(flight, system, last, step)
+    return np.moveaxis(records, 1, 0).reshape(len(last), -1), records[-1]
 
 
 def travelling(records: Floats) -> NDArray[np.bool_]:

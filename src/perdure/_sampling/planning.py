@@ -8,10 +8,11 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from perdure._kernels.rows import OUTSIDE
 from perdure._records import BoxGrid, BurstOptions, CaseRecord, CellOptions, Floats, Integers, Plan, System
 from perdure._sampling.pilot import Flight, Pilot, burst_length, time_step
 
-__all__ = ["Domain", "boxes_per_axis", "domain", "make_plan"]
+__all__ = ["Domain", "Visited", "boxes_per_axis", "domain", "make_plan"]
 
 # Boxes along an axis, by dimension, when nothing is given.
 AXIS_BOXES = {1: 1024, 2: 192, 3: 72, 4: 28, 5: 16, 6: 11}
@@ -42,6 +43,46 @@ class Domain:
     upper: Floats
     given: NDArray[np.bool_]
     closed: NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class Visited:
+    """Cells that the pilot's points lie in.
+
+    Attributes
+    ----------
+    keys, n_hit : ndarray of int64, shape (n,)
+        Keys, ascending, and the points in each.
+    n_point : int
+        All points, those outside included.
+    """
+
+    keys: Integers
+    n_hit: Integers
+    n_point: int
+
+    @classmethod
+    def none(cls) -> Visited:
+        return cls(np.zeros(0, dtype=np.int64), np.zeros(0, dtype=np.int64), 0)
+
+    def joined(self, key: Integers) -> Visited:
+        """With more points, whose keys are key (n,)."""
+        more, n_more = np.unique(key[key < OUTSIDE], return_counts=True)
+        keys, at = np.unique(np.concatenate([self.keys, more]), return_inverse=True)
+        n_hit = np.zeros(len(keys), dtype=np.int64)
+        np.add.at(n_hit, at, np.concatenate([self.n_hit, n_more]))
+        return Visited(keys, n_hit, self.n_point + len(key))
+
+    @property
+    def seldom(self) -> int:
+        """Cells met once."""
+        return int(np.sum(self.n_hit == 1))
+
+    @property
+    def expected(self) -> int:
+        """Cells that there seem to be, unseen ones included (A. Chao, Scand. J. Statist. 11 (1984) 265-270)."""
+        twice = int(np.sum(self.n_hit == 2))
+        return len(self.keys) + self.seldom * max(self.seldom - 1, 0) // (2 * (twice + 1))
 
 
 def domain(system: System, cells: CellOptions, pilot: Pilot) -> Domain:
@@ -131,21 +172,21 @@ def make_plan(
     scheme: str,
     grid: BoxGrid,
     ends: Domain,
-    visited: tuple[Integers, Integers],
+    visited: Visited,
     found: Mapping[str, str],
 ) -> Plan:
-    """Plan of the run; `visited` are the cells of the pilot's points and their numbers, `found` the reasons so far."""
-    seed_keys, n_point = visited
+    """Plan of the run; `found` are the reasons so far."""
+    seed_keys = visited.keys
     step, n_step, more = burst_and_step(case, pilot, flight, grid.width, scheme)
     reasons = dict(found) | more
-    per_cell, n_replicate, why = bursts_per_cell(case.bursts, len(seed_keys), n_step)
+    per_cell, n_replicate, why = bursts_per_cell(case.bursts, visited.expected, n_step)
     if why:
         reasons["bursts per cell"] = why
     return Plan(
         grid=grid,
         bounded=bool(ends.closed.any()),
         seed_keys=seed_keys,
-        seed_share=n_point / pilot.points.shape[1],
+        seed_share=visited.n_hit / visited.n_point,
         step=step,
         n_step=n_step,
         per_cell=per_cell,
@@ -158,8 +199,9 @@ def make_plan(
         pilot={
             "starts": pilot.n_start,
             "kept": pilot.n_kept,
-            "points": pilot.points.shape[1],
+            "points": visited.n_point,
             "rate": pilot.rate,
             "cells": len(seed_keys),
+            "cells_expected": visited.expected,
         },
     )

@@ -97,11 +97,12 @@ def outcome_of(case: CaseRecord, found: Findings) -> tuple[str, tuple[str, ...],
             "[cells] lower, upper; if that does not help, the system may have no long-run density at all"
         )
     held = sum(regime.weight.value or 0.0 for regime in regimes)
-    if not regimes or held < 0.5:
+    if not regimes or held < 0.5 or not found.settled:
         messages.append(
-            f"leaking: {int(found.leaks.sum())} of {counts['cells']} cells sent bursts away for good and no class of "
-            f"cells holds its mass (a start uniform over the cells stays with probability {held:.3g}), so that no "
-            "long-run density exists on this domain; widen [cells] lower, upper, or leave them out"
+            f"leaking: {int(found.leaks.sum())} of {counts['cells']} cells sent bursts away for good, and no class of "
+            f"cells holds its mass (a start uniform over the cells stays with probability {held:.3g}, stays outside "
+            f"{'have' if found.settled else 'have not'} settled): no long-run density exists on this domain; widen "
+            "[cells] lower, upper, or leave them out"
         )
         return "leaking", tuple(messages), False
     if found.leaks.any():
@@ -113,8 +114,8 @@ def outcome_of(case: CaseRecord, found: Findings) -> tuple[str, tuple[str, ...],
     if found.pilot_share < PILOT_LEAST:
         messages.append(
             f"only {found.pilot_share:.2g} of the pilot's points lie in the cells of the regimes: bursts are too short "
-            "or too few to leave slow cells, and the numbers describe those cells alone; give longer [bursts] duration or "
-            "steps, or more per_cell"
+            "or too few to leave slow cells, and the numbers describe those cells alone; give longer [bursts] duration "
+            "or steps, or more per_cell"
         )
     passed = (
         found.settled and found.pilot_share >= PILOT_LEAST and all(abs(r.eigenvalue - 1.0) <= 1e-9 for r in regimes)

@@ -1,0 +1,110 @@
+"""Intervals: their ranges, their coverage in simulation, and bounds for what was never seen."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import pytest
+from helpers.statistics import assert_agrees
+from scipy.stats import t
+
+from perdure._statistics.intervals import interval, quantile, upper_bound
+
+
+@pytest.mark.parametrize("freedom", [1.0, 2.5, 7.0, 100.0, 1e9])
+def test_quantile_is_that_of_student(freedom: float) -> None:
+    assert quantile(freedom) == pytest.approx(t.ppf(0.975, freedom), rel=1e-9)
+
+
+def test_fewer_than_one_degree_of_freedom_counts_as_one() -> None:
+    assert quantile(0.3) == quantile(1.0)
+
+
+@pytest.mark.parametrize("error", [1e-12, 1e-3, 0.3, 1e3, 1e300])
+@pytest.mark.parametrize("value", [1e-300, 1e-9, 0.02, 0.5, 0.999999, 1.0 - 2.0**-53])
+def test_shares_stay_between_zero_and_one(value: float, error: float) -> None:
+    found = interval(value, error, 7.0, "1", "share")
+    assert found.low is not None
+    assert found.high is not None
+    assert 0.0 <= found.low <= value <= found.high <= 1.0 or found.high == pytest.approx(value, rel=1e-15)
+
+
+@pytest.mark.parametrize("error", [1e-12, 1e-3, 5.0, 1e300])
+@pytest.mark.parametrize("value", [1e-300, 1e-3, 40.0])
+def test_positive_numbers_stay_positive(value: float, error: float) -> None:
+    found = interval(value, error, 7.0, "s", "positive")
+    assert found.low is not None
+    assert found.high is not None
+    assert 0.0 <= found.low <= value <= found.high
+    assert found.unit == "s"
+
+
+@pytest.mark.parametrize(("kind", "value"), [("share", 0.3), ("positive", 4.0), ("real", -2.0)])
+def test_small_errors_give_the_plain_interval(kind: str, value: float) -> None:
+    """To first order all scales agree; and the standard error is kept as given."""
+    found = interval(value, 1e-6, 12.0, "1", kind)
+    half = quantile(12.0) * 1e-6
+    np.testing.assert_allclose([found.low, found.high], [value - half, value + half], atol=1e-4 * half)
+    assert found.error == 1e-6
+
+
+@pytest.mark.parametrize(("kind", "value"), [("share", 0.0), ("share", 1.0), ("positive", 0.0)])
+def test_values_at_the_end_of_their_range(kind: str, value: float) -> None:
+    """Nothing to take the logarithm of: the plain interval."""
+    found = interval(value, 0.1, 1e9, "1", kind)
+    np.testing.assert_allclose([found.low, found.high], [value - 0.196, value + 0.196], atol=1e-4)
+
+
+@pytest.mark.parametrize("value", [math.nan, math.inf, -math.inf])
+def test_no_number_no_interval(value: float) -> None:
+    found = interval(value, 0.1, 7.0, "1", "real")
+    assert (found.value, found.low, found.high) == (None, None, None)
+    assert "not finite" in found.reason
+
+
+def covered(freedom: int, taken: float, n: int = 20_000) -> tuple[float, float]:
+    """Part of intervals that hold the truth, and its standard error; `taken` is the freedom that they claim."""
+    rng = np.random.default_rng(5)
+    value, error = rng.standard_normal(n), np.sqrt(rng.chisquare(freedom, n) / freedom)
+    found = [interval(float(v), float(e), taken, "1", "real") for v, e in zip(value, error, strict=True)]
+    part = np.mean([q.low is not None and q.high is not None and q.low <= 0.0 <= q.high for q in found])
+    return float(part), math.sqrt(0.95 * 0.05 / n)
+
+
+@pytest.mark.parametrize("freedom", [3, 14])
+def test_coverage(freedom: int) -> None:
+    """95 percent of intervals hold the truth; with a normal in place of Student's law they do not (control)."""
+    part, error = covered(freedom, freedom)
+    assert_agrees(part, 0.95, error)
+    part, error = covered(freedom, 1e9)
+    with pytest.raises(AssertionError):
+        assert_agrees(part, 0.95, error)
+
+
+def test_coverage_of_shares() -> None:
+    """A share of 0.02 from 600 draws: the logit interval; on the plain scale too few hold the truth (control)."""
+    rng, n, p = np.random.default_rng(6), 600, 0.02
+    shares = rng.binomial(n, p, 20_000) / n
+    shares = shares[shares > 0.0]
+    parts = {}
+    for kind in ("share", "real"):
+        found = [interval(float(s), math.sqrt(s * (1.0 - s) / n), 1e9, "1", kind) for s in shares]
+        parts[kind] = np.mean([(q.low or 0.0) <= p <= (q.high or 0.0) for q in found])
+    # counts are whole numbers: the nominal level cannot be met exactly, here to within 2 percent
+    assert_agrees(parts["share"], 0.95, 0.0016, allowance=0.02)
+    with pytest.raises(AssertionError):
+        assert_agrees(parts["real"], 0.95, 0.0016, allowance=0.02)
+
+
+@pytest.mark.parametrize("n", [1.0, 30.0, 1e4, 1e12])
+def test_upper_bound(n: float) -> None:
+    """The probability with which nothing is seen in n bursts with chance 5 percent; 3 / n for large n."""
+    bound = upper_bound(n)
+    assert n * math.log1p(-bound) == pytest.approx(math.log(0.05))
+    if n > 1e3:
+        assert bound == pytest.approx(3.0 / n, rel=2e-3)
+
+
+def test_upper_bound_of_less_than_one_burst() -> None:
+    assert upper_bound(0.1) == upper_bound(1.0) == pytest.approx(0.95)
