@@ -33,8 +33,8 @@ def assert_agrees(
     )
     value, truth, error, spare = (part.ravel() for part in parts)
     assert value.size > 0, "nothing to compare"
-    assert np.all(np.isfinite(error)) and np.all(error >= 0.0), f"standard errors {error} must be finite"
-    assert np.all(np.isfinite(spare)) and np.all(spare >= 0.0), f"allowances {spare} must be finite"
+    for name, size in (("standard errors", error), ("allowances", spare)):
+        assert np.all((size >= 0.0) & np.isfinite(size)), f"{name} {size} must be finite and not negative"
     excess = np.abs(value - truth) - (STANDARD_ERRORS * error + spare)
     worst = int(np.argmax(np.where(np.isnan(excess), np.inf, excess)))
     v, t, e, s = value[worst], truth[worst], error[worst], spare[worst]

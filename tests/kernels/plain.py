@@ -83,9 +83,7 @@ def weak_two(
     out = x + step / 2 * (a(ahead + sum(k * w[j] for j, k in enumerate(kicks))) + a(x))
     for j, column in enumerate(b):
         plus, minus = column(ahead + root * kicks[j]), column(ahead - root * kicks[j])
-        out = (
-            out + (plus + minus + 2 * kicks[j]) * w[j] / 4 + (plus - minus) * (w[j] ** 2 - step) / (4 * root)
-        )
+        out = out + (plus + minus + 2 * kicks[j]) * w[j] / 4 + (plus - minus) * (w[j] ** 2 - step) / (4 * root)
         for r in range(len(b)):
             if cross and r != j:
                 plus, minus = column(x + root * kicks[r]), column(x - root * kicks[r])

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 import pytest
 from scipy.linalg import expm
@@ -114,7 +116,7 @@ def test_lanes_do_not_depend_on_their_neighbours() -> None:
     """With draws too: a burst alone is the burst in company, to the last bit."""
     words = np.random.default_rng(4).integers(0, 2**63, 100).astype(np.uint64)
     start = np.linspace(-1.0, 1.0, 100)
-    options = {"parameters": [0.1, -0.5, 0.3, 0.2], "step": 0.1, "n_step": 7}
+    options: dict[str, Any] = {"parameters": [0.1, -0.5, 0.3, 0.2], "step": 0.1, "n_step": 7}
     whole = fly("weak2", start, stream=words, **options).state[0]
     part = fly("weak2", start[61:72], stream=words[61:72], **options).state[0]
     np.testing.assert_array_equal(whole[61:72], part)
@@ -132,9 +134,7 @@ def test_marginal_slots_agree_with_histogram(stride: int) -> None:
     for k in range(2):
         edges = np.concatenate([[-np.inf], np.linspace(lower[k], upper[k], n_interval + 1), [np.inf]])
         for sample, points in zip(flown.slots[:, k], path[:, k], strict=True):
-            np.testing.assert_array_equal(
-                np.bincount(sample, minlength=n_interval + 2), np.histogram(points, edges)[0]
-            )
+            np.testing.assert_array_equal(np.bincount(sample, minlength=n_interval + 2), np.histogram(points, edges)[0])
         assert np.bincount(flown.slots[:, k].ravel())[[0, -1]].min() > 0, "both ends must be passed"
 
 

@@ -17,7 +17,7 @@ inf, nan = math.inf, math.nan
 def ulps(value: np.ndarray, exact: np.ndarray) -> np.ndarray:
     """Errors in units of the last place of the exact value."""
     place = np.spacing(np.abs(exact.astype(float)))
-    return np.abs((value.astype(np.longdouble) - exact) / place).astype(float)
+    return np.asarray(np.abs((value.astype(np.longdouble) - exact) / place), dtype=float)
 
 
 def long(function: Callable[..., np.ndarray], x: np.ndarray) -> np.ndarray:
@@ -40,9 +40,7 @@ def through_lanes(row: int, **points: np.ndarray) -> np.ndarray:
 
 def exponents() -> np.ndarray:
     rng = np.random.default_rng(1)
-    return np.concatenate(
-        [rng.uniform(-700.0, 700.0, 30_000), rng.uniform(-1.0, 1.0, 10_000), [0.0, 1.0, -700.0]]
-    )
+    return np.concatenate([rng.uniform(-700.0, 700.0, 30_000), rng.uniform(-1.0, 1.0, 10_000), [0.0, 1.0, -700.0]])
 
 
 def positives() -> np.ndarray:

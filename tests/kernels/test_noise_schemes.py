@@ -55,16 +55,12 @@ def order_of(found: list[tuple[float, float]], exact: float) -> tuple[float, flo
     return float(np.log2(coarse / fine)), float(np.hypot(e1 / coarse, e2 / fine) / np.log(2.0))
 
 
-def scalar_order(
-    name: str, parameters: list[float], start: float, power: int, exact: float
-) -> tuple[float, float]:
+def scalar_order(name: str, parameters: list[float], start: float, power: int, exact: float) -> tuple[float, float]:
     """Order of E[x**power] at time 1, from 4 and 8 steps."""
     found = []
     for n_step in (4, 8):
         x = np.full(N, start)
-        flown = fly(
-            name, x, parameters=parameters, step=1.0 / n_step, n_step=n_step, stream=words_of(N, n_step)
-        )
+        flown = fly(name, x, parameters=parameters, step=1.0 / n_step, n_step=n_step, stream=words_of(N, n_step))
         found.append(mean_and_error(flown.state[0] ** power))
     return order_of(found, exact)
 
@@ -102,13 +98,11 @@ def one_step_of_moments(step: float, *, cross: bool) -> np.ndarray:
     w = np.sqrt(step) * np.array([first, second])
     kicks = [lambda x: KICK_1 @ x, lambda x: KICK_2 @ x]
     columns = [
-        weak_two(
-            lambda x: DRIFT @ x, kicks, np.repeat(unit[:, None], part.size, axis=1), step, w, v, cross=cross
-        )
+        weak_two(lambda x: DRIFT @ x, kicks, np.repeat(unit[:, None], part.size, axis=1), step, w, v, cross=cross)
         for unit in np.eye(2)
     ]
     matrix = np.stack(columns, axis=1)
-    return np.einsum("ikn,jln,n->ijkl", matrix, matrix, part).reshape(4, 4)
+    return np.asarray(np.einsum("ikn,jln,n->ijkl", matrix, matrix, part).reshape(4, 4))
 
 
 def test_plain_version_is_of_order_two_only_with_the_terms_between_noises() -> None:
@@ -197,9 +191,7 @@ def test_euler_inflates_the_variance_as_it_must() -> None:
 def test_weak_scheme_keeps_the_variance() -> None:
     """The same law by the scheme of order 2, its stationary variance solved by hand."""
     h = 0.2
-    x = fly(
-        "ornstein", np.zeros(N // 4), parameters=[1.0, 1.0], step=h, n_step=120, stream=words_of(N // 4, 7)
-    )
+    x = fly("ornstein", np.zeros(N // 4), parameters=[1.0, 1.0], step=h, n_step=120, stream=words_of(N // 4, 7))
     square, error = mean_and_error(x.state[0] ** 2)
     # x' = (1 - h + h^2/2) x + (1 - h/2) w: the fixed point of the variance
     factor, kick = 1.0 - h + h * h / 2.0, 1.0 - h / 2.0

@@ -79,9 +79,7 @@ def test_left_product(chain: Chain, plainly: Callable[[Any], Any]) -> None:
 def test_replicate_product(chain: Chain, plainly: Callable[[Any], Any]) -> None:
     y = np.full((9, N_REP, K), 9.0)
     plainly(replicate_product)(chain.pointer, chain.column, chain.count, chain.x, 4, 13, y)
-    np.testing.assert_allclose(
-        y, np.einsum("ijr,jk->irk", chain.dense[4:13], chain.x), rtol=1e-13, atol=1e-11
-    )
+    np.testing.assert_allclose(y, np.einsum("ijr,jk->irk", chain.dense[4:13], chain.x), rtol=1e-13, atol=1e-11)
 
 
 def test_scatter_product_adds(chain: Chain, plainly: Callable[[Any], Any]) -> None:

@@ -101,9 +101,7 @@ def rows_of(kernel: Kernel, key: np.ndarray, first: np.ndarray, n_rep: int) -> t
     return pointer, column[:n], count[:n]
 
 
-@pytest.mark.parametrize(
-    ("size", "n_rep"), [(2, 2), (44, 2), (48, 4), (48, 8), (50, 2), (52, 4), (512, 8), (6, 1)]
-)
+@pytest.mark.parametrize(("size", "n_rep"), [(2, 2), (44, 2), (48, 4), (48, 8), (50, 2), (52, 4), (512, 8), (6, 1)])
 def test_count_rows_agrees_with_unique(plainly: Callable[[Kernel], Kernel], size: int, n_rep: int) -> None:
     """Sizes on both sides of 48, where another way of sorting takes over."""
     rng = np.random.default_rng(size)
@@ -130,9 +128,7 @@ def test_count_rows_of_boxes_of_different_size() -> None:
     np.testing.assert_array_equal(count, [[0, 2], [2, 0], [1, 0], [0, 1]])
 
 
-def slot_rows(
-    kernel: Kernel, slots: np.ndarray, first: np.ndarray, n_rep: int, n_slot: int, room: int
-) -> Any:
+def slot_rows(kernel: Kernel, slots: np.ndarray, first: np.ndarray, n_rep: int, n_slot: int, room: int) -> Any:
     n_dim = slots.shape[1]
     board = np.zeros((n_dim * n_slot, n_rep), dtype=np.int64)
     pointer = np.empty(len(first), dtype=np.int64)
@@ -175,9 +171,7 @@ def test_sum_rows_agrees_with_numpy(plainly: Callable[[Kernel], Kernel]) -> None
     sums = np.random.default_rng(3).standard_normal((3, 40))
     out = np.full((5, 2, 3), 9.0)
     plainly(sum_rows)(sums, np.arange(6, dtype=np.int64) * 8, 2, out)
-    np.testing.assert_allclose(
-        out, sums.reshape(3, 5, 2, 4).sum(axis=3).transpose(1, 2, 0), rtol=1e-14, atol=1e-14
-    )
+    np.testing.assert_allclose(out, sums.reshape(3, 5, 2, 4).sum(axis=3).transpose(1, 2, 0), rtol=1e-14, atol=1e-14)
 
 
 def test_table_of_keys_agrees_with_a_dictionary(plainly: Callable[[Kernel], Kernel]) -> None:
@@ -204,16 +198,12 @@ def test_place_rows_agrees_with_plain_version(
     lengths = np.array([3, 0, 5, 1])
     place = np.array([2, 0, 3, 1], dtype=np.int32)
     block_pointer = np.concatenate([[0], np.cumsum(lengths)])
-    block_column = np.concatenate([np.sort(rng.choice(9, n, replace=False)) for n in lengths]).astype(
-        np.int32
-    )
+    block_column = np.concatenate([np.sort(rng.choice(9, n, replace=False)) for n in lengths]).astype(np.int32)
     block_count = rng.integers(0, 250, (9, 2)).astype(np.uint8)
     rename = rng.permutation(9).astype(np.int32) if renamed else np.zeros(0, dtype=np.int32)
     pointer = np.concatenate([[0], np.cumsum(lengths[np.argsort(place)])])
     column, count = np.full(9, -1, dtype=np.int32), np.zeros((9, 2), dtype=np.uint16)
-    plainly(place_rows)(
-        block_pointer, block_column, block_count, place, pointer, rename, ascending, column, count
-    )
+    plainly(place_rows)(block_pointer, block_column, block_count, place, pointer, rename, ascending, column, count)
     for i in range(4):
         mine = slice(block_pointer[i], block_pointer[i + 1])
         names = rename[block_column[mine]] if renamed else block_column[mine]

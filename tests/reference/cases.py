@@ -231,6 +231,7 @@ TABLES: dict[str, dict[str, Any]] = {
     "P29-triple-gradient": {
         "system": {"kind": "flow", "state": ["x"], "equations": {"x": "-x*(x**2 - 1)*(x**2 - 4)"}},
         "events": {"right": {"when": "x > 1"}},
+        "observables": {"x": "x"},
     },
     "P30-two-logistic": flat_map(
         "4*x*(1 - 2*x) if x < 0.5 else 0.5 + 2*(2*x - 1)*(2 - 2*x)",

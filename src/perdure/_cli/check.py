@@ -49,13 +49,14 @@ def plan_dict(case: Case, plan: Plan, cost: Mapping[str, float]) -> dict[str, An
             "name": name,
             "unit": unit,
             "lower": float(lower),
-            "upper": float(lower + width * count),
-            "count": int(count),
+            "upper": float(upper),
+            "count": max(1, round(float((upper - lower) / width))),
             "width": float(width),
             "periodic": bool(periodic),
         }
-        for name, unit, lower, width, count, periodic in zip(
-            system.state, system.units, grid.lower, grid.width, grid.counts, grid.periodic, strict=True
+        # the lattice itself goes on beyond the ends of an open axis
+        for name, unit, lower, upper, width, periodic in zip(
+            system.state, system.units, plan.axis_lower, plan.axis_upper, grid.width, grid.periodic, strict=True
         )
     ]
     return {
@@ -122,7 +123,7 @@ def _axis_text(axis: Mapping[str, Any]) -> str:
 def _domain_text(plan: Plan) -> str:
     if plan.bounded:
         return "bounded: what leaves it is counted as outside"
-    return "open: cells are added as far as bursts go"
+    return "open: cells are added beyond these ends as far as bursts go"
 
 
 def _memory_text(size: float) -> str:

@@ -43,6 +43,8 @@ class KernelSpec:
     events : tuple of str
         Conditions.
     observables : tuple of str
+    periodic : tuple of (str, float, float)
+        Name, lower end and period of each component that wraps around; it is wrapped after every step.
     function, noise_function : callable or None
         Compiled or compilable scalar functions used in place of `drift` and `noise`.
     """
@@ -55,6 +57,7 @@ class KernelSpec:
     draws: tuple[tuple[str, str], ...] = ()
     events: tuple[str, ...] = ()
     observables: tuple[str, ...] = ()
+    periodic: tuple[tuple[str, float, float], ...] = ()
     function: Callable[..., Any] | None = None
     noise_function: Callable[..., Any] | None = None
     lanes: int = field(default=LANES)
@@ -137,6 +140,8 @@ def lane_body(
     for name, law in spec.draws:
         lines.append(f"v_{name} = {next(spare) if law == 'normal' else next(loose)}")
     lines += step_lines(spec, normal[:n_wiener], sign)
+    for s, low, period in spec.periodic:
+        lines.append(f"y_{s} = y_{s} - {period!r} * np.floor((y_{s} - {low!r}) * {1.0 / period!r})")
     lines += [f"v_{s} = y_{s}" for s in spec.state]
     lines += [f"{row} = y_{s}" for s, row in zip(spec.state, state, strict=True)]
     for k, condition in enumerate(spec.events):

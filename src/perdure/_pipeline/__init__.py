@@ -87,8 +87,10 @@ def estimate(case: CaseRecord, *, workers: int | None = None, progress: Progress
     transition = TransitionMatrix(done.all.tally)
     n = len(done.keys)
     members = [cells for cells in classes.members if cells[0] < n]
-    basins = absorption(transition, tuple(members)) if len(members) > 1 or classes.leaks.any() else None
-    weights = regime_weights(transition, tuple(members), basins, visits, n)
+    # what never comes back from outside ends there: a closed class, but no regime
+    ends = (*members, *(cells for cells in classes.members if cells[0] >= n))
+    basins = absorption(transition, ends)[:, : len(members)] if len(ends) > 1 or classes.leaks.any() else None
+    weights = regime_weights(transition, ends, basins, visits, n)
     regimes, outside = [], []
     for k, cells in enumerate(members):
         report("regime", k, len(members))

@@ -27,7 +27,7 @@ def parameter_values(case: CaseRecord) -> Floats:
 
 
 def kernel_spec(case: CaseRecord) -> KernelSpec:
-    system = case.system
+    system, lower, upper = case.system, case.cells.lower, case.cells.upper
     return KernelSpec(
         scheme=scheme_of(case),
         state=system.state,
@@ -37,6 +37,7 @@ def kernel_spec(case: CaseRecord) -> KernelSpec:
         draws=system.draws,
         events=tuple(e.condition.source for e in case.events),
         observables=tuple(o.expression.source for o in case.observables),
+        periodic=tuple((s, lower[s], upper[s] - lower[s]) for s in case.cells.periodic),
         function=system.function,
         noise_function=system.noise_function,
     )

@@ -129,6 +129,12 @@ def finite_columns(state: Floats) -> Floats:
     return state[:, np.isfinite(state).all(axis=0)]
 
 
+def near_columns(state: Floats) -> Floats:
+    """Trajectories within a million times the median magnitude: from beyond, none comes back in a pilot's time."""
+    magnitude = np.abs(state)
+    return state[:, (magnitude <= 1e6 * (1.0 + np.median(magnitude, axis=1, keepdims=True))).all(axis=0)]
+
+
 def local_rate(flight: Flight, points: Floats) -> float:
     """Median rate at which small differences change: two lanes with one noise, a short time apart.
 
@@ -174,7 +180,7 @@ def survey(flight: Flight, system: System, cells: CellOptions, bursts: BurstOpti
             step = min(0.05 / rate, bursts.step or np.inf)
             if 0.8 < rate / before < 1.25:
                 break
-        state = long_flight(flight, system, state, step, 400)[:, : 4 * N_LANE]
+        state = near_columns(long_flight(flight, system, state, step, 400))[:, : 4 * N_LANE]
         if state.shape[1] < 2:
             break
     if state.shape[1] >= 2:

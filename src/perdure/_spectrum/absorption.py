@@ -35,7 +35,7 @@ def absorption(transition: Transition, members: tuple[Integers, ...]) -> Floats:
         return target
     push = transition.right(target) * transient[:, None]
     found = solved(transition, transient, push, 1e-10, transposed=False)
-    return np.clip(found * transient[:, None] + target, 0.0, 1.0)
+    return np.asarray(np.clip(found * transient[:, None] + target, 0.0, 1.0))
 
 
 def visits(transition: Transition, members: tuple[Integers, ...], start: Floats) -> Floats:

@@ -179,8 +179,8 @@ def why_no_rate(case: CaseRecord, k: int) -> str:
     if not event.condition.names & shaken:
         return ""
     return (
-        "a path driven by white noise crosses the edge of a plain region infinitely often, so the entry rate grows "
-        "without limit as the step shrinks; state the event with components that carry no noise, or with `until`"
+        "white noise crosses a plain edge infinitely often, so a rate would depend on the step alone; state the event "
+        "with components that carry no noise, or with `until`"
     )
 
 

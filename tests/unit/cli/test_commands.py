@@ -216,7 +216,7 @@ def test_check_prints_the_plan(engine: Engine, capsys: Capture) -> None:
         "  system           flow, dimension 2",
         "  axis x           -2 to 2 m, 8 boxes of width 0.5 m",
         "  axis z           0 to 1, 4 boxes of width 0.25, periodic",
-        "  domain           open: cells are added as far as bursts go",
+        "  domain           open: cells are added beyond these ends as far as bursts go",
         "  pilot cells      20",
         "  burst length     0.5 s (100 steps)",
         "  time step        0.005 s",
@@ -276,7 +276,8 @@ def test_check_of_a_map_has_no_time_step(
         PLAN.grid, lower=PLAN.grid.lower[:1], width=PLAN.grid.width[:1],
         counts=PLAN.grid.counts[:1], periodic=PLAN.grid.periodic[:1],
     )  # fmt: skip
-    made = dataclasses.replace(PLAN, grid=grid, step=1.0, n_step=4, scheme="map", bounded=True, found={})
+    ends = {"axis_lower": PLAN.axis_lower[:1], "axis_upper": PLAN.axis_upper[:1]}
+    made = dataclasses.replace(PLAN, grid=grid, step=1.0, n_step=4, scheme="map", bounded=True, found={}, **ends)
     pipeline = sys.modules["perdure._pipeline"]
     monkeypatch.setattr(pipeline, "plan", lambda case: made)
     monkeypatch.setattr(pipeline, "forecast_cost", lambda case, plan: COST)

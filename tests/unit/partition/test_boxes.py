@@ -15,9 +15,7 @@ from perdure._streams import seed_words
 EVERYWHERE = np.array([[-np.inf, np.inf]] * 3)
 
 
-def grid_of(
-    lower: list[float], width: list[float], counts: list[int], periodic: list[bool] | None = None
-) -> BoxGrid:
+def grid_of(lower: list[float], width: list[float], counts: list[int], periodic: list[bool] | None = None) -> BoxGrid:
     return BoxGrid(
         np.array(lower),
         np.array(width),
@@ -155,9 +153,7 @@ def test_lattice_with_given_ends_is_that_range() -> None:
 def test_open_ends_reach_beyond() -> None:
     """Only at the open ends, by whole boxes, so that the old edges stay edges."""
     fixed = np.array([[True, False], [False, False]])
-    grid = lattice(
-        np.array([0.0, 0.0]), np.array([1.0, 3.0]), np.array([10, 6]), fixed, np.zeros(2, dtype=bool)
-    )
+    grid = lattice(np.array([0.0, 0.0]), np.array([1.0, 3.0]), np.array([10, 6]), fixed, np.zeros(2, dtype=bool))
     upper = grid.lower + grid.counts * grid.width
     np.testing.assert_allclose(grid.width, [0.1, 0.5])
     assert grid.lower[0] == 0.0

@@ -42,9 +42,9 @@ def test_limit() -> None:
     """At the limit the first of the new keys are taken and `full` is set; afterwards none is."""
     cover = Cover(5)
     cover.add(np.array([10, 30, 20]))
-    assert not cover.full
+    before = cover.full
     np.testing.assert_array_equal(cover.add(np.array([4, 20, 50, 2])), [2, 4])
-    assert cover.full
+    assert (before, cover.full) == (False, True)
     assert len(cover.add(np.array([7]))) == 0
     np.testing.assert_array_equal(cover.ids(np.array([2, 4, 50, 7]), -1), [3, 4, -1, -1])
 

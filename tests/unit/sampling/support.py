@@ -24,9 +24,7 @@ def system_of(name: str) -> System:
 
 
 def flight_of(name: str, parameters: Sequence[float] = (0.0,), seed: int = 1) -> Flight:
-    return Flight(
-        kernel(name), np.array(parameters, dtype=float), SPECS[name].n_sum, generator(seed, "pilot")
-    )
+    return Flight(kernel(name), np.array(parameters, dtype=float), SPECS[name].n_sum, generator(seed, "pilot"))
 
 
 def plan_of(grid: BoxGrid, **changes: Any) -> Plan:

@@ -91,9 +91,7 @@ def test_rows_agree_with_bursts_flown_one_cell_at_a_time() -> None:
         np.testing.assert_array_equal(block.target[part], np.unique(target))
         by_replicate = (target.reshape(4, 4)[None] == block.target[part][:, None, None]).sum(axis=2)
         np.testing.assert_array_equal(block.count[part], by_replicate)
-        np.testing.assert_allclose(
-            block.sums[i], flown.sums.reshape(8, 4, 4).sum(axis=2).T, rtol=1e-14, atol=1e-14
-        )
+        np.testing.assert_allclose(block.sums[i], flown.sums.reshape(8, 4, 4).sum(axis=2).T, rtol=1e-14, atol=1e-14)
         dense = np.zeros((24, 4), dtype=int)
         mine = slice(block.slot_pointer[i], block.slot_pointer[i + 1])
         dense[block.slot[mine]] = block.slot_count[mine]
@@ -110,9 +108,7 @@ def test_rows_hold_every_burst(alone: dict[str, np.ndarray]) -> None:
     begin = np.concatenate([[0], np.cumsum(alone["lengths"])[:-1]])
     np.testing.assert_array_equal(np.add.reduceat(alone["count"].astype(int), begin), np.full((99, 4), 4))
     begin = np.concatenate([[0], np.cumsum(alone["slot_lengths"])[:-1]])
-    np.testing.assert_array_equal(
-        np.add.reduceat(alone["slot_count"].astype(int), begin), np.full((99, 4), 4 * 3 * 2)
-    )
+    np.testing.assert_array_equal(np.add.reduceat(alone["slot_count"].astype(int), begin), np.full((99, 4), 4 * 3 * 2))
     assert alone["count"].dtype == np.uint8
 
 

@@ -24,9 +24,7 @@ from unit.sampling.support import flight_of, system_of
 
 
 def surveyed(name: str, *parameters: float, cells: CellOptions | None = None) -> Pilot:
-    return survey(
-        flight_of(name, parameters or (0.0,)), system_of(name), cells or CellOptions(), BurstOptions()
-    )
+    return survey(flight_of(name, parameters or (0.0,)), system_of(name), cells or CellOptions(), BurstOptions())
 
 
 def mean_and_error(pilot: Pilot, values: np.ndarray) -> tuple[float, float]:
@@ -80,9 +78,7 @@ def test_no_attractor() -> None:
     with pytest.raises(NoAttractorError) as caught:
         surveyed("logistic", 5.0)
     message = str(caught.value)
-    assert re.search(
-        r"\d+ of 8192 pilot trajectories .* became non-finite; allowed: .*; check the equations", message
-    )
+    assert re.search(r"\d+ of 8192 pilot trajectories .* became non-finite; allowed: .*; check the equations", message)
     assert "[cells] lower and upper" in message
 
 
@@ -141,9 +137,7 @@ def test_time_step_of_noisy_flows_is_a_stated_part() -> None:
     """The largest step that divides the burst and is at most that part; the scheme of order 1 gets a smaller one."""
     parts = {}
     for scheme in ("weak2", "euler-maruyama"):
-        step, n_step, why = time_step(
-            flight_of("ornstein", [2.0, 0.5]), circle(2.0), 3.0, np.ones(1), True, scheme
-        )
+        step, n_step, why = time_step(flight_of("ornstein", [2.0, 0.5]), circle(2.0), 3.0, np.ones(1), True, scheme)
         stated = re.search(rf"([0-9.e-]+) \({scheme}\)", why)
         assert stated is not None
         parts[scheme] = float(stated[1])

@@ -62,9 +62,7 @@ def test_domain_of_heavy_tails_is_closed() -> None:
     points = np.array([rng.standard_cauchy(20_000), rng.standard_normal(20_000)])
     found = domain(system_of("spiral"), CellOptions(), pilot_of(points))
     low, high = np.quantile(points[0], [0.005, 0.995])
-    np.testing.assert_allclose(
-        [found.lower[0], found.upper[0]], [1.5 * low - 0.5 * high, 1.5 * high - 0.5 * low]
-    )
+    np.testing.assert_allclose([found.lower[0], found.upper[0]], [1.5 * low - 0.5 * high, 1.5 * high - 0.5 * low])
     np.testing.assert_array_equal(found.closed, [[True, True], [False, False]])
     np.testing.assert_array_equal(found.given, np.zeros((2, 2), dtype=bool))
     given = domain(system_of("spiral"), CellOptions(upper={"x": 9.0}), pilot_of(points))
@@ -73,9 +71,7 @@ def test_domain_of_heavy_tails_is_closed() -> None:
 
 def test_domain_of_a_fixed_point_has_a_width() -> None:
     """Half a percent of its size, at least of 1, on either side."""
-    found = domain(
-        system_of("spiral"), CellOptions(), pilot_of(np.array([[40.0], [0.0]]) * np.ones((2, 100)))
-    )
+    found = domain(system_of("spiral"), CellOptions(), pilot_of(np.array([[40.0], [0.0]]) * np.ones((2, 100))))
     np.testing.assert_allclose(found.upper - found.lower, [0.4, 0.01])
     np.testing.assert_allclose(found.upper + found.lower, [80.0, 0.0])
 

@@ -10,11 +10,11 @@ import sys
 
 import numpy as np
 import pytest
-from unit.transitions.support import tally_of
 
 from perdure._spectrum import absorption, closed_classes, visits
 from perdure._transitions import TransitionMatrix
 from perdure.errors import NotConvergedError
+from unit.transitions.support import tally_of
 
 
 def ruin(n: int, up: int, down: int, lost: int = 0) -> TransitionMatrix:
@@ -85,14 +85,14 @@ def test_visits_from_a_law_of_starts() -> None:
 
 
 def test_slow_game() -> None:
-    """A fair game with 2000 states, where the iteration stalls: factors take over; without them it is an error."""
-    n = 2000
+    """A fair game with 1000 states, where the iteration stalls: factors take over; without them it is an error."""
+    n = 1000
     chain = ruin(n, 1, 1)
     classes = closed_classes(chain.tally).members
     j = np.arange(n + 1)
     np.testing.assert_allclose(absorption(chain, classes)[:, 1], j / n, atol=1e-9)
-    found = visits(chain, classes, np.where(j == 700, 1.0, 0.0))
-    exact = 2.0 * np.minimum(700, j) * (n - np.maximum(700, j)) / n
+    found = visits(chain, classes, np.where(j == 350, 1.0, 0.0))
+    exact = 2.0 * np.minimum(350, j) * (n - np.maximum(350, j)) / n
     np.testing.assert_allclose(found, exact, rtol=1e-9, atol=1e-9)
 
 
@@ -104,5 +104,3 @@ def test_stalled_iteration_is_an_error(monkeypatch: pytest.MonkeyPatch) -> None:
     classes = closed_classes(chain.tally).members
     with pytest.raises(NotConvergedError, match=r"999 transient cells .*1998 entries .*allowed 100.*; use fewer"):
         absorption(chain, classes)
-    with pytest.raises(NotConvergedError, match="999 transient cells"):
-        visits(chain, classes, np.full(1001, 1.0 / 1001.0))

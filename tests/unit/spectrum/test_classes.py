@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
+from itertools import pairwise
 
 import numpy as np
 import pytest
-from unit.transitions.support import tally_of
 
 from perdure._records import Tally
 from perdure._spectrum import closed_classes, period_of
+from unit.transitions.support import tally_of
 
 OUT, BLOWN = -2, -1
 
@@ -20,6 +21,12 @@ def chain(n: int, edges: Iterable[tuple[int, int]]) -> Tally:
     for i, j in edges:
         counts[i, j] = 1
     return tally_of(counts)
+
+
+def path(*stops: int) -> list[tuple[int, int]]:
+    """Edges: path(6) leads from 0 through 5, path(6, 13) from 0 to 6 and on through 13."""
+    cells = list(range(stops[0])) if len(stops) == 1 else [0, *range(stops[0], stops[1] + 1)]
+    return list(pairwise(cells))
 
 
 def members(tally: Tally) -> list[list[int]]:
@@ -77,14 +84,12 @@ def test_single_cells() -> None:
         ([(i, 4 + j) for i in range(4) for j in range(4)] + [(4 + j, i) for i in range(4) for j in range(4)], 2),
         # cycles of 6 and 9 through cell 0
         (
-            [*zip(range(5), range(1, 6), strict=True), (5, 0), (0, 6)]
-            + [*zip(range(6, 13), range(7, 14), strict=True), (13, 0)],
+            [*path(6), (5, 0), *path(6, 13), (13, 0)],
             3,
         ),
         # cycles of 6 and 10
         (
-            [*zip(range(5), range(1, 6), strict=True), (5, 0), (0, 6)]
-            + [*zip(range(6, 14), range(7, 15), strict=True), (14, 0)],
+            [*path(6), (5, 0), *path(6, 14), (14, 0)],
             2,
         ),
     ],

@@ -7,15 +7,15 @@ from types import SimpleNamespace
 
 import numpy as np
 import pytest
-from helpers.statistics import assert_agrees
-from unit.transitions.support import tally_of
 
+from helpers.statistics import assert_agrees
 from perdure._records import SlotRows
 from perdure._spectrum import ClassSolver
 from perdure._statistics import marginal_numbers
 from perdure._statistics.marginals import balanced_signs
 from perdure._statistics.numbers import errors_of
 from perdure._transitions import TransitionMatrix, scattered_slots
+from unit.transitions.support import tally_of
 
 N, N_REP, SIZE = 6, 8, 40
 N_REPEAT = 3000
@@ -74,13 +74,13 @@ def mean_error(experiment: Experiment, tallies: np.ndarray, **options: bool) -> 
 def spread(experiment: Experiment, tallies: np.ndarray) -> np.ndarray:
     """True standard deviation of both means and of their difference."""
     means = experiment.mean(tallies.sum(axis=3) / (SIZE * N_REP))
-    assert_agrees(means.mean(axis=0), experiment.mean(experiment.rows), means.std(axis=0) / np.sqrt(N_REPEAT), allowance=0.01)
+    assert_agrees(
+        means.mean(axis=0), experiment.mean(experiment.rows), means.std(axis=0) / np.sqrt(N_REPEAT), allowance=0.01
+    )
     return np.asarray(np.concatenate([means, means[:, :1] - means[:, 1:]], axis=1).std(axis=0, ddof=1))
 
 
-def test_reported_error_is_the_true_spread(
-    experiment: Experiment, tallies: np.ndarray, spread: np.ndarray
-) -> None:
+def test_reported_error_is_the_true_spread(experiment: Experiment, tallies: np.ndarray, spread: np.ndarray) -> None:
     """Within 10 percent, of which 1.3 are the sampling error of the spread itself."""
     np.testing.assert_allclose(mean_error(experiment, tallies), spread, rtol=0.1)
 

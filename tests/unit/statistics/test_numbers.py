@@ -7,13 +7,13 @@ from typing import Any
 
 import numpy as np
 import pytest
-from unit.transitions.support import tally_of
 
 from perdure import Case
 from perdure._records import EventResult, ObservableResult
 from perdure._spectrum import ClassSolver
 from perdure._statistics import regime_numbers
 from perdure._transitions import TransitionMatrix
+from unit.transitions.support import tally_of
 
 N_STEP, TAU = 10, 2.5
 
@@ -50,7 +50,12 @@ def sums_of(*rows: list[list[float]]) -> np.ndarray:
 
 # time inside, entries, then the event never seen, then sum and sum of squares of x; [cell][replicate]
 SUMS = sums_of(
-    [[12, 8], [2, 2]], [[4, 4], [1, 3]], [[0, 0], [0, 0]], [[0, 0], [0, 0]], [[40, 80], [20, 20]], [[100, 140], [60, 60]]
+    [[12, 8], [2, 2]],
+    [[4, 4], [1, 3]],
+    [[0, 0], [0, 0]],
+    [[0, 0], [0, 0]],
+    [[40, 80], [20, 20]],
+    [[100, 140], [60, 60]],
 )
 
 

@@ -7,14 +7,18 @@ from typing import Any
 
 import numpy as np
 import pytest
-from unit.sampling.support import plan_of
 
 from perdure._records import BoxGrid, Tally
 from perdure._transitions import Collected, RowStore, with_outside
+from unit.sampling.support import plan_of
 
 N_REP, N_SLOT, N_SUM = 2, 6, 3
 PLAN = plan_of(
-    BoxGrid(np.zeros(1), np.ones(1), np.array([50]), np.array([False])), per_cell=20, n_replicate=N_REP, n_step=9, stride=2
+    BoxGrid(np.zeros(1), np.ones(1), np.array([50]), np.array([False])),
+    per_cell=20,
+    n_replicate=N_REP,
+    n_step=9,
+    stride=2,
 )
 
 

@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from unit.transitions.support import dense_counts, tally_of
 
 from perdure._records import SlotRows
 from perdure._transitions import TransitionMatrix, scattered_slots
+from unit.transitions.support import dense_counts, tally_of
 
 N, N_REP = 17, 4
 
