@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from perdure._kernels.assemble import place_rows
+from perdure._kernels.assemble import merge_repeats, place_rows
 from perdure._kernels.rows import (
     BLOWN,
     OUTSIDE,
@@ -211,3 +211,15 @@ def test_place_rows_agrees_with_plain_version(
         there = slice(pointer[place[i]], pointer[place[i] + 1])
         np.testing.assert_array_equal(column[there], names[order])
         np.testing.assert_array_equal(count[there], block_count[mine][order])
+
+
+def test_merge_repeats_adds_up_neighbours_of_one_row(plainly: Callable[[Kernel], Kernel]) -> None:
+    """Not across the border of two rows, and an empty row stays empty."""
+    pointer = np.array([0, 4, 4, 6, 9], dtype=np.int64)
+    column = np.array([1, 1, 1, 5, 5, 7, 2, 3, 3], dtype=np.int32)
+    count = np.arange(18, dtype=np.uint16).reshape(9, 2)
+    n = plainly(merge_repeats)(pointer, column, count)
+    assert n == 6
+    np.testing.assert_array_equal(pointer, [0, 2, 2, 4, 6])
+    np.testing.assert_array_equal(column[:n], [1, 5, 5, 7, 2, 3])
+    np.testing.assert_array_equal(count[:n], [[6, 9], [6, 7], [8, 9], [10, 11], [12, 13], [30, 32]])

@@ -92,9 +92,7 @@ TABLES: dict[str, dict[str, Any]] = {
         " + 0.5*((18*x) % 1)",
         {"L": "x < 0.5", "R": "x >= 0.5", "Q": "0.4 <= x < 0.6"},
     ),
-    "P08-doubling-events": flat_map(
-        "(2*x) % 1", {"A": "0 <= x < 1/8", "B": "3/8 <= x < 1/2", "C": "3/4 <= x < 7/8"}
-    ),
+    "P08-doubling-events": flat_map("(2*x) % 1", {"A": "0 <= x < 1/8", "B": "3/8 <= x < 1/2", "C": "3/4 <= x < 7/8"}),
     "P09-boole-cauchy": flat_map(
         "alpha*x - beta/x",
         {"A": "-1 <= x <= 1", "B": "2 <= x <= 5", "D": "-0.2 <= x <= 0.1", "C": "x > 10"},

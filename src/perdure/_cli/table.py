@@ -132,8 +132,10 @@ def _covered(result: Result | DensityFile) -> str:
         numbers += [observable.mean for observable in regime.observables.values()]
     parts = sorted({part for number in numbers for part in number.parts})
     if set(parts) <= {"sampling"}:
-        return "errors and intervals are those of sampling alone: cell size and time step come on top"
-    return f"errors and intervals include: {', '.join(parts)}"
+        return "errors and intervals are those of sampling alone; not in them: cell size and time step"
+    missing = [name for part, name in (("cells", "cell size"), ("step", "time step")) if part not in parts]
+    rest = f"; not in them: {' and '.join(missing)}" if missing else ""
+    return f"errors and intervals include: {', '.join(parts)}{rest}"
 
 
 def _cost(result: Result | DensityFile, verbose: bool) -> list[str]:

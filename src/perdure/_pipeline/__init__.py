@@ -14,7 +14,7 @@ import perdure
 from perdure._pipeline.prepare import Prepared, prepare
 from perdure._pipeline.sampled import Sampled, sample_all
 from perdure._pipeline.watch import Clock, Progress, silent
-from perdure._records import CaseRecord, Estimate, Integers, Plan, Quantity, Regime
+from perdure._records import CaseRecord, Estimate, Floats, Integers, Plan, Quantity, Regime
 from perdure._result import Result
 from perdure._sampling import kernel_for
 from perdure._spectrum import ClassSolver, absorption, period_of, visits
@@ -28,7 +28,7 @@ from perdure._statistics import (
     regime_weights,
 )
 from perdure._streams import generator
-from perdure._transitions import TransitionMatrix, scattered_slots
+from perdure._transitions import TransitionMatrix, lumped, scattered_slots
 
 __all__ = ["estimate", "forecast_cost", "plan"]
 
@@ -91,18 +91,20 @@ def estimate(case: CaseRecord, *, workers: int | None = None, progress: Progress
     ends = (*members, *(cells for cells in classes.members if cells[0] >= n))
     basins = absorption(transition, ends)[:, : len(members)] if len(ends) > 1 or classes.leaks.any() else None
     weights = regime_weights(transition, ends, basins, visits, n)
-    regimes, outside = [], []
+    regimes, outside, rough = [], [], False
     for k, cells in enumerate(members):
         report("regime", k, len(members))
-        regime, share = regime_of(ready, done, transition, cells, weights[k], clock)
+        regime, share, is_rough = regime_of(ready, done, transition, cells, weights[k], clock)
         regimes.append(regime)
         outside.append(share)
+        rough |= is_rough
     order = sorted(range(len(regimes)), key=lambda k: -(regimes[k].weight.value or 0.0))
     state = Findings(
         ready.plan,
         done.counts,
         [regimes[k] for k in order],
         classes.leaks,
+        rough,
         done.settled,
         pilot_share(ready.plan, done, members),
     )
@@ -148,12 +150,14 @@ def regime_of(
     members: Integers,
     weight: Quantity,
     clock: Clock,
-) -> tuple[Regime, Quantity]:
-    """Stationary mass and long-run numbers of one closed class, and its share of time outside."""
+) -> tuple[Regime, Quantity, bool]:
+    """Long-run numbers of one closed class, its share of time outside, and whether its error bars are rough."""
     case, found = ready.case, done.all
     solver = ClassSolver(transition, members)
     clock.stage("stationary mass")
-    events, observables = regime_numbers(case, ready.plan, transition, solver.mass, found.sums, solver.adjoint)
+    events, observables = regime_numbers(
+        case, ready.plan, transition, solver.mass, found.sums, solver.adjoint, coarser_masses(done, members)
+    )
     share = outside_quantity(ready.plan, transition, solver.mass, done.has_outside, solver.adjoint)
     clock.stage("numbers")
     marginals = marginal_numbers(
@@ -179,7 +183,23 @@ def regime_of(
         observables=observables,
         marginals=marginals,
     )
-    return regime, share
+    return regime, share, solver.rough
+
+
+def coarser_masses(done: Sampled, members: Integers) -> Floats:
+    """Stationary mass of a class, (2, n_cell), with cells of twice and four times the width, from the same bursts.
+
+    Shape (0, n_cell) for a class of fewer than 8 cells: there is nothing to lump.
+    """
+    n = done.all.tally.n_cell
+    if len(members) < 8:
+        return np.zeros((0, n))
+    lifted = np.zeros((2, n))
+    for level, factor in enumerate((2, 4)):
+        coarse = lumped(done.all.tally, members, done.grid, done.keys, factor)
+        solver = ClassSolver(TransitionMatrix(coarse.tally), np.arange(coarse.tally.n_cell))
+        lifted[level, members] = coarse.lifted(solver.mass)
+    return lifted
 
 
 def versions() -> dict[str, str]:

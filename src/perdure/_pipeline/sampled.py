@@ -134,10 +134,20 @@ def follow_outside(ready: Prepared, done: Sampled, progress: Progress) -> Sample
     return replace(done, all=grown, settled=settled)
 
 
+def one_step(ready: Prepared) -> Prepared:
+    """Bursts of one step: under k steps at once the phases of a cycle whose length divides k look like regimes."""
+    found = dict(ready.plan.found) | {"burst length": "one step, to tell regimes from the phases of a cycle"}
+    return replace(ready, plan=replace(ready.plan, n_step=1, stride=1, found=found))
+
+
 def sample_all(ready: Prepared, workers: int, progress: Progress) -> tuple[Prepared, Sampled, Classes]:
     """All bursts of a run. With several regimes the boxes between them are sent bursts too, for the basins."""
     done = follow_outside(ready, sample(ready, workers, progress), progress)
     classes = closed_classes(done.all.tally)
+    if len(classes.members) > 1 and not ready.case.system.is_flow and ready.case.bursts.steps is None:
+        ready = one_step(ready)
+        done = follow_outside(ready, sample(ready, workers, progress), progress)
+        classes = closed_classes(done.all.tally)
     if len(classes.members) < 2:
         return ready, done, classes
     between = hull(ready.plan.grid, done.lattice_keys, MOST_HULL)

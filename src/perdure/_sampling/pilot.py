@@ -131,6 +131,8 @@ def finite_columns(state: Floats) -> Floats:
 
 def near_columns(state: Floats) -> Floats:
     """Trajectories within a million times the median magnitude: from beyond, none comes back in a pilot's time."""
+    if not state.shape[1]:
+        return state
     magnitude = np.abs(state)
     return state[:, (magnitude <= 1e6 * (1.0 + np.median(magnitude, axis=1, keepdims=True))).all(axis=0)]
 

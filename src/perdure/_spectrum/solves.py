@@ -88,6 +88,11 @@ class ClassSolver:
         mass = np.maximum(mass, 0.0)
         return self._spread(mass / mass.sum())
 
+    @property
+    def rough(self) -> bool:
+        """Whether a solve for an error bar stopped at a relative residual above one percent."""
+        return self.solver.worst > 0.01
+
     def adjoint(self, values: Floats) -> Floats:
         """h with (I - P) h = values - mass . values on the class, mass . h = 0; values and h (n_cell, k)."""
         h = self._spread(self.solver.right((values - self.mass @ values)[self.members]))

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from perdure._records import CaseRecord, EventResult, Floats, ObservableResult, Plan, Quantity, Transition
-from perdure._statistics.intervals import interval, upper_bound
+from perdure._statistics.intervals import cells_part, interval, upper_bound
 
 __all__ = ["Averages", "regime_numbers"]
 
@@ -28,12 +28,22 @@ class Averages:
     ----------
     value : ndarray, shape (n_sum,)
         Per event the share and the entries per burst; per observable mean and mean square.
+    coarser : ndarray, shape (2, n_sum)
+        The same with cells of twice and four times the width; shape (0, n_sum) where that is not known.
     effective : float
         Bursts that count, 1 / sum(mass^2 / bursts) (L. Kish's effective sample size).
     """
 
     value: Floats
+    coarser: Floats
     effective: float
+
+    def cells(self, number: Callable[[Floats], float]) -> float | None:
+        """Part of the error of a number from cell size; `number` makes it from the averages."""
+        if not len(self.coarser):
+            return None
+        with np.errstate(divide="ignore", invalid="ignore"):
+            return cells_part((number(self.value), number(self.coarser[0]), number(self.coarser[1])))
 
 
 def per_burst(sums: Floats, transition: Transition, plan: Plan, n_event: int) -> Floats:
@@ -72,6 +82,7 @@ def regime_numbers(
     mass: Floats,
     sums: Floats,
     adjoint: Callable[[Floats], Floats],
+    lifted: Floats,
 ) -> tuple[Mapping[str, EventResult], Mapping[str, ObservableResult]]:
     """All named numbers of one regime.
 
@@ -83,13 +94,16 @@ def regime_numbers(
         Sums along the bursts, as the kernel made them.
     adjoint : callable
         Solves (I - P) h = g - mu(g) for columns g.
+    lifted : ndarray, shape (2, n_cell)
+        Stationary mass with cells of twice and four times the width; shape (0, n_cell) where that is not known.
     """
     n_event = len(case.events)
     means = per_burst(sums, transition, plan, n_event)
     weight = transition.tally.bursts / transition.tally.bursts.sum(axis=1, keepdims=True)
     pooled = np.einsum("irg,ir->ig", means, weight)
-    value = mass @ np.where(mass[:, None] > 0.0, pooled, 0.0)
-    averages = Averages(value, 1.0 / float(np.sum(mass**2 / transition.tally.bursts.sum(axis=1))))
+    held = np.where(mass[:, None] > 0.0, pooled, 0.0)
+    value = mass @ held
+    averages = Averages(value, lifted @ held, 1.0 / float(np.sum(mass**2 / transition.tally.bursts.sum(axis=1))))
     fine = np.isfinite(value)
     h = np.zeros_like(pooled)
     if fine.any():
@@ -145,7 +159,7 @@ def event_result(
     if share == 0.0:
         quantity = Quantity(None, 0.0, bound, {}, "1", f"never seen {seen}: upper bound")
     else:
-        quantity = interval(share, *at["share", k], "1", "share")
+        quantity = interval(share, *at["share", k], "1", "share", averages.cells(lambda v: v[2 * k]))
     refusal = why_no_rate(case, k)
     if refusal:
         return EventResult(
@@ -160,9 +174,15 @@ def event_result(
         return EventResult(quantity, rate, period, none)
     return EventResult(
         quantity,
-        interval(entries / tau, *at["rate", k], rate_unit, "positive"),
-        interval(tau / entries, *at["period", k], time, "positive"),
-        interval(share * tau / entries, *at["spell", k], time, "positive"),
+        interval(entries / tau, *at["rate", k], rate_unit, "positive", averages.cells(lambda v: v[2 * k + 1] / tau)),
+        interval(tau / entries, *at["period", k], time, "positive", averages.cells(lambda v: tau / v[2 * k + 1])),
+        interval(
+            share * tau / entries,
+            *at["spell", k],
+            time,
+            "positive",
+            averages.cells(lambda v: v[2 * k] * tau / v[2 * k + 1]),
+        ),
     )
 
 
@@ -201,6 +221,12 @@ def observable_result(
     square_unit = unit if unit == "1" else f"({unit})^2"
     spread = max(square - mean * mean, 0.0)
     return ObservableResult(
-        interval(mean, *at["mean", k], unit, "real"),
-        interval(spread if np.isfinite(square) else np.nan, *at["variance", k], square_unit, "positive"),
+        interval(mean, *at["mean", k], unit, "real", averages.cells(lambda v: v[first])),
+        interval(
+            spread if np.isfinite(square) else np.nan,
+            *at["variance", k],
+            square_unit,
+            "positive",
+            averages.cells(lambda v: v[first + 1] - v[first] ** 2),
+        ),
     )

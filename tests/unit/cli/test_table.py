@@ -53,7 +53,7 @@ def test_one_regime() -> None:
         "               value  95 percent interval",
         "outside share  0      0 to 0.000120",
         "",
-        "errors and intervals are those of sampling alone: cell size and time step come on top",
+        "errors and intervals are those of sampling alone; not in them: cell size and time step",
         "",
         "cells 3, bursts 192, steps 9600, time 61 s",
     ]
@@ -97,10 +97,10 @@ def test_details() -> None:
 
 
 def test_parts_of_the_budget_are_named() -> None:
-    share = Quantity(0.2, 0.1, 0.3, {"sampling": 0.03, "cell size": 0.04})
+    share = Quantity(0.2, 0.1, 0.3, {"sampling": 0.03, "cells": 0.04})
     event = EventResult(share, SEEN.entry_rate, SEEN.return_period, SEEN.mean_spell)
     only = regime(quantity(1.0, 0.0), events={"reversal": event})
     lines = results_text(FakeResult(regimes=(only,))).split("\n")
-    assert "errors and intervals include: cell size, sampling" in lines
+    assert "errors and intervals include: cells, sampling; not in them: time step" in lines
     # both parts in quadrature
     assert "reversal  share of time  0.200 ± 0.050    0.100 to 0.300" in lines

@@ -10,7 +10,7 @@ from scipy.stats import binom, t
 
 from helpers.statistics import assert_agrees
 from perdure._records import Quantity
-from perdure._statistics.intervals import interval, quantile, upper_bound
+from perdure._statistics.intervals import cells_part, interval, quantile, upper_bound
 
 
 def ends(found: Quantity) -> tuple[float, float]:
@@ -116,3 +116,23 @@ def test_upper_bound(n: float) -> None:
 
 def test_upper_bound_of_less_than_one_burst() -> None:
     assert upper_bound(0.1) == upper_bound(1.0) == pytest.approx(0.95)
+
+
+def test_part_from_cell_size() -> None:
+    """Errors c h^p of a number: the part is half of what is left at h, or more where differences shrink faster."""
+    for order, least, most in ((1.0, 0.5, 0.5001), (0.5, 0.49, 0.51), (2.0, 0.5, 1.5)):
+        error = [scale**order for scale in (1.0, 2.0, 4.0)]
+        part = cells_part((7.0 + error[0], 7.0 + error[1], 7.0 + error[2]))
+        assert least <= part <= most
+    assert cells_part((1.0, 1.0, 1.0)) == 0.0
+    # one small difference between two large ones is chance
+    assert cells_part((1.0, 1.0, 1.4)) == pytest.approx(0.05)
+    assert cells_part((1.0, float("nan"), 1.0)) == 0.0
+
+
+def test_parts_add_in_quadrature() -> None:
+    alone = interval(2.0, 0.03, 1e9, "1", "real")
+    both = interval(2.0, 0.03, 1e9, "1", "real", 0.04)
+    assert alone.high is not None and both.high is not None
+    assert (both.high - 2.0) / (alone.high - 2.0) == pytest.approx(5.0 / 3.0)
+    assert both.parts == {"sampling": 0.03, "cells": 0.04}
