@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import os
+import shlex
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -58,8 +59,9 @@ def run(
     # Only now: the engine takes a second to load, and the mistakes of a case should not wait for it.
     from perdure._pipeline import estimate
 
+    command = ["perdure", "run", case.name, *([] if seed is None else ["--seed", str(seed)])]
     with contextlib.closing(reporter_for(quiet=quiet)) as progress:
-        result = estimate(checked, workers=workers, progress=progress)
+        result = estimate(checked, workers=workers, progress=progress, command=shlex.join(command))
     sha256: str | None = None
     try:
         sha256 = result.save(target)

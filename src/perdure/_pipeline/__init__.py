@@ -56,7 +56,9 @@ def forecast_cost(case: CaseRecord, made: Plan) -> dict[str, float]:
     return {"cells": cells, "bursts": bursts, "steps": steps, "memory_bytes": memory, "seconds": seconds}
 
 
-def estimate(case: CaseRecord, *, workers: int | None = None, progress: Progress | None = None) -> Result:
+def estimate(
+    case: CaseRecord, *, workers: int | None = None, progress: Progress | None = None, command: str = ""
+) -> Result:
     """Long-run statistics of a case: what ``perdure run`` computes.
 
     Parameters
@@ -66,6 +68,8 @@ def estimate(case: CaseRecord, *, workers: int | None = None, progress: Progress
         Threads; all processors if None. The numbers do not depend on it, to the last bit.
     progress : callable or None
         Called as progress(stage, done, total).
+    command : str
+        Kept in the result, for the record.
 
     Returns
     -------
@@ -128,6 +132,7 @@ def estimate(case: CaseRecord, *, workers: int | None = None, progress: Progress
             timings=clock.seconds,
             packages=versions(),
             counts=done.counts,
+            command=command,
             created=datetime.now(UTC).isoformat(timespec="seconds"),
         )
     )

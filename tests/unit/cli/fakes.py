@@ -126,8 +126,8 @@ class Engine:
             raise self.case
         return self.case if seed is None else replace(self.case, seed=seed)
 
-    def estimate(self, case: Any, *, workers: int | None = None, progress: Any = None) -> Any:
-        self.log.append(("estimate", (case.seed, workers)))
+    def estimate(self, case: Any, *, workers: int | None = None, progress: Any = None, command: str = "") -> Any:
+        self.log.append(("estimate", (case.seed, workers, command)))
         progress("pilot", 0, 1)
         progress("bursts", 3, 400)
         self.work()

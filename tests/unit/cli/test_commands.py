@@ -35,7 +35,7 @@ def test_run_prints_results_and_saves(engine: Engine, capsys: Capture) -> None:
     assert out.endswith(f"\nsaved in loop.h5 (SHA-256 {SHA256})\n")
     assert err.splitlines() == ["pilot", "bursts 3/400"]
     assert engine.result.saved == [Path("loop.h5")]
-    assert engine.log == [("load_case", Path("loop.toml")), ("estimate", (7, None))]
+    assert engine.log == [("load_case", Path("loop.toml")), ("estimate", (7, None, "perdure run loop.toml"))]
 
 
 def test_run_hands_on_workers_seed_and_output(engine: Engine, tmp_path: Path) -> None:
@@ -43,7 +43,7 @@ def test_run_hands_on_workers_seed_and_output(engine: Engine, tmp_path: Path) ->
     target.parent.mkdir()
     big = 2**80
     assert main(["run", "loop.toml", "-o", str(target), "--workers", "3", "--seed", str(big)]) == 0
-    assert engine.log[-1] == ("estimate", (big, 3))
+    assert engine.log[-1] == ("estimate", (big, 3, f"perdure run loop.toml --seed {big}"))
     assert engine.result.saved == [target]
 
 

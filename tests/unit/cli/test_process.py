@@ -13,7 +13,9 @@ import pytest
 
 # A stand-in for the engine whose work prints "begun" and then takes a minute.
 STAND_IN = """
-import sys, time
+import signal, sys, time
+# a shell starts its background jobs with this signal ignored, and children inherit that
+signal.signal(signal.SIGINT, signal.default_int_handler)
 from pathlib import Path
 from types import ModuleType
 from unit.cli.fakes import Engine
