@@ -38,6 +38,7 @@ N_LANE = 16384
 ONE_BY_ONE = "a C loop (gcc -O3 -march=native), one trajectory at a time, without events or tallies"
 IN_LANES = "a C loop (gcc -O3 -march=native) over 64 trajectories held as arrays, without events or tallies"
 NUMPY_LOOP = "a numba loop over one trajectory at a time that calls numpy's normal generator at every step"
+BARE = "a bare Python process"
 TALLY = "one Runge-Kutta step of the sampler without events: the ratio is steps per burst"
 
 
@@ -292,7 +293,24 @@ def bench_tally(repeats: int, folder: Path) -> list[Line]:
     ]
 
 
-BENCHES = {"flow": bench_flow, "noisy": bench_noisy, "tally": bench_tally}
+def bench_start(repeats: int, folder: Path) -> list[Line]:
+    """Whole processes: the help of the command, and reading a case file."""
+
+    def process(*arguments: str) -> Callable[[], float]:
+        return lambda: clocked(lambda: subprocess.run([sys.executable, *arguments], check=True, capture_output=True))
+
+    case = Path(__file__).resolve().parents[1] / "cases" / "loop.toml"
+    load = f"import perdure; perdure.load_case({str(case)!r})"
+    works = {"bare": process("-c", "pass"), "help": process("-m", "perdure", "--help"), "load": process("-c", load)}
+    best = least(works, max(5, repeats // 2))
+    yardstick = (BARE, best["bare"])
+    return [
+        line("perdure --help", best["help"], "s", yardstick, None, most=True),
+        line("read a case file", best["load"], "s", yardstick, None, most=True),
+    ]
+
+
+BENCHES = {"flow": bench_flow, "noisy": bench_noisy, "tally": bench_tally, "start": bench_start}
 
 
 def shown(lines: list[Line]) -> str:

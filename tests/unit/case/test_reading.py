@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import os
 import subprocess
 import sys
@@ -178,31 +177,18 @@ def test_a_text_too_long_to_search_gives_up_in_time() -> None:
     assert time.process_time() - start < 15.0
 
 
-# ---------------------------------------------------------------------------------------------- cost
+# ------------------------------------------------------------------------------------------- imports
 
-COST = """
-import json, sys, time
-import numpy
-start = time.process_time()
+LOADED = """
+import sys
 from perdure._case import load_case
 load_case(sys.argv[1])
-seconds = time.process_time() - start
-unwanted = {"numba", "scipy", "sympy", "h5py", "sklearn", "sparse", "matplotlib", "click"}
-heavy = sorted(unwanted & set(sys.modules))
-print(json.dumps([seconds, heavy]))
+print(*{"numba", "scipy", "sympy", "h5py", "sklearn", "sparse", "matplotlib", "click"} & set(sys.modules))
 """
 
 
-def test_loading_is_quick_and_imports_nothing_heavy(tmp_path: Path) -> None:
-    """Processor time after numpy, with the import of pydantic, best of 3."""
+def test_loading_imports_nothing_heavy(tmp_path: Path) -> None:
     path = tmp_path / "a.toml"
     path.write_text(MAP)
-    seconds = []
-    for _ in range(3):
-        done = subprocess.run(
-            [sys.executable, "-c", COST, str(path)], capture_output=True, check=True, text=True
-        )
-        taken, heavy = json.loads(done.stdout)
-        assert heavy == []
-        seconds.append(taken)
-    assert min(seconds) < 0.3
+    done = subprocess.run([sys.executable, "-c", LOADED, str(path)], capture_output=True, check=True, text=True)
+    assert done.stdout.split() == []

@@ -41,9 +41,7 @@ def regime(weight: Quantity, **changes: Any) -> Regime:
         "residual": 1e-16,
         "eigenvalue": 1.0,
         "events": {"reversal": SEEN, "flood": NEVER},
-        "observables": {
-            "height": ObservableResult(quantity(23.5507, 0.02, "m"), quantity(74.3, 0.5, "(m)^2"))
-        },
+        "observables": {"height": ObservableResult(quantity(23.5507, 0.02, "m"), quantity(74.3, 0.5, "(m)^2"))},
         "marginals": {},
     }
     return Regime(**(content | changes))

@@ -85,9 +85,7 @@ def test_failed_check_is_status_1_and_saved(engine: Engine, capsys: Capture) -> 
 
 
 def test_every_mistake_of_a_case_has_a_line(engine: Engine, capsys: Capture) -> None:
-    engine.case = CaseError(
-        ["loop.toml, [cells] uper: unknown key", "loop.toml, [case] seed: -1 is negative"]
-    )
+    engine.case = CaseError(["loop.toml, [cells] uper: unknown key", "loop.toml, [case] seed: -1 is negative"])
     assert main(["check", "loop.toml"]) == 2
     out, err = capsys.readouterr()
     assert out == ""
@@ -134,9 +132,7 @@ def test_traceback_only_with_v(engine: Engine, capsys: Capture) -> None:
 
 
 @pytest.mark.parametrize("error", [OutputError("a.h5: the disk is full"), KeyboardInterrupt()])
-def test_numbers_are_printed_when_the_file_cannot_be_saved(
-    engine: Engine, capsys: Capture, error: Any
-) -> None:
+def test_numbers_are_printed_when_the_file_cannot_be_saved(engine: Engine, capsys: Capture, error: Any) -> None:
     engine.result = FakeResult(fault=error)
     status = main(["run", "loop.toml", "--json"])
     assert status == (2 if isinstance(error, OutputError) else 3)
@@ -148,9 +144,7 @@ def test_numbers_are_printed_when_the_file_cannot_be_saved(
     assert "saved in" not in out
 
 
-def test_show_refuses_a_foreign_file(
-    engine: Engine, capsys: Capture, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_show_refuses_a_foreign_file(engine: Engine, capsys: Capture, monkeypatch: pytest.MonkeyPatch) -> None:
     def open_file(path: Path) -> None:
         raise DensityFileError(f"{path}: not a density file")
 
@@ -268,9 +262,7 @@ def test_outside_the_main_thread(engine: Engine, capsys: Capture) -> None:
     assert capsys.readouterr().err == ""
 
 
-def test_check_of_a_map_has_no_time_step(
-    engine: Engine, capsys: Capture, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_check_of_a_map_has_no_time_step(engine: Engine, capsys: Capture, monkeypatch: pytest.MonkeyPatch) -> None:
     engine.case = MAP
     grid = dataclasses.replace(
         PLAN.grid, lower=PLAN.grid.lower[:1], width=PLAN.grid.width[:1],
