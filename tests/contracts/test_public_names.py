@@ -74,6 +74,7 @@ def test_options_of_estimate_are_keywords() -> None:
         "case": inspect.Parameter.POSITIONAL_OR_KEYWORD,
         "workers": inspect.Parameter.KEYWORD_ONLY,
         "progress": inspect.Parameter.KEYWORD_ONLY,
+        "command": inspect.Parameter.KEYWORD_ONLY,
     }
 
 

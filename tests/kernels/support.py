@@ -136,7 +136,7 @@ def fly(
         sums,
         slots,
         words,
-        np.array(parameters, dtype=float),
+        np.array([*list(parameters)[: len(SPECS[name].parameters)], *[0.0] * len(SPECS[name].observables)] or [0.0]),
         float(step),
         n_step,
         stride,

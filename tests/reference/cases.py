@@ -152,7 +152,7 @@ TABLES: dict[str, dict[str, Any]] = {
     "P16-ou": noisy(
         {"x": "-theta*(x - mu)"},
         {"x": "sigma"},
-        {"A": "x > 1", "B": "0 < x < 0.5", "D": "x < -0.6", "E": "abs(x - 0.4) > 1.5"},
+        {"A": "x > 1", "B": "0 < x < 0.5", "D": "x < -0.6", "E": "abs(x - 0.4) > 1.5", "far": "x > 4.5"},
         {"x": "x"},
         parameters={"theta": 1.5, "mu": 0.4, "sigma": 0.9},
     ),

@@ -12,7 +12,7 @@ import numpy as np
 
 from perdure import Quantity, Result
 
-__all__ = ["Known", "known", "quantity", "scale"]
+__all__ = ["Known", "known", "quantity", "sampling", "scale"]
 
 
 @dataclass(frozen=True)
@@ -67,3 +67,8 @@ def scale(result: Result, number: str, regime: str = "") -> float:
     if kind != "mean":
         return abs(value)
     return float(np.hypot(value, np.sqrt(quantity(result, f"variance {name}", regime).value)))
+
+
+def sampling(number: Quantity) -> float:
+    """Standard error from the finite number of bursts alone: what the cells and the step add is allowed for apart."""
+    return float(number.parts["sampling"])

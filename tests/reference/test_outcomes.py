@@ -13,8 +13,8 @@ import perdure
 from helpers.statistics import assert_agrees
 from perdure import Case, Result
 from perdure.errors import NoAttractorError
-from reference.cases import TABLES, flat_map, reference_case
-from reference.known import known, quantity
+from reference.cases import flat_map, reference_case
+from reference.known import known, quantity, sampling
 
 OU_SMALL: dict[str, Any] = {
     "cells": {"counts": {"x": 128}},
@@ -33,7 +33,7 @@ def reference(name: str, number: str) -> Any:
 
 @cache
 def three_sinks() -> Result:
-    return perdure.estimate(reference_case("P29-triple-gradient"))
+    return perdure.estimate(reference_case("P29-triple-gradient", bursts={"per_cell": 64}))
 
 
 def places(result: Result) -> list[float]:
@@ -78,7 +78,8 @@ def test_weights_of_three_sinks_are_the_lengths_of_their_basins() -> None:
 
 
 def test_two_halves_are_two_regimes_of_equal_weight() -> None:
-    result = perdure.estimate(reference_case("P30-two-logistic"))
+    cells = {"counts": {"x": 256}, "lower": {"x": 0.0}, "upper": {"x": 1.0}}
+    result = perdure.estimate(reference_case("P30-two-logistic", cells=cells, bursts={"per_cell": 256}))
     assert result.outcome == "several-regimes"
     assert [regime.period for regime in result.regimes] == [1, 1]
     weights = [regime.weight.value for regime in result.regimes]
@@ -91,8 +92,7 @@ def test_two_halves_are_two_regimes_of_equal_weight() -> None:
 
 
 def logistic(r: float, **more: Any) -> Result:
-    events = {"high": "x > 0.65"}
-    return perdure.estimate(Case(**flat_map("r*x*(1 - x)", events, parameters={"r": r}), **more))
+    return perdure.estimate(reference_case("P01-logistic", **more).with_parameters(r=r))
 
 
 def assert_is_cycle(result: Result, period: int, mean: float) -> None:
@@ -100,7 +100,8 @@ def assert_is_cycle(result: Result, period: int, mean: float) -> None:
     (regime,) = result.regimes
     assert regime.period == period
     assert any("periodic" in line for line in result.messages)
-    assert regime.events["high"].share.value == pytest.approx(0.5, abs=1e-12)
+    # half of the points of either cycle lie between 0.25 and 0.75
+    assert regime.events["D"].share.value == pytest.approx(0.5, abs=1e-12)
     # a burst starts within a cell of the cycle and nears it
     assert regime.observables["x"].mean.value == pytest.approx(mean, abs=2.0 * float(result.grid.width[0]))
 
@@ -142,7 +143,7 @@ def test_a_map_without_a_stationary_probability_is_never_given_a_density() -> No
         result = perdure.estimate(reference_case("P10-boole-infinite", cells=cells | ends, bursts=bursts))
         assert not result.checks_passed
         assert result.messages
-        assert result.outcome == "leaking" or any("not settled" in line for line in result.messages)
+        assert result.outcome != "one-regime" or any("not settled" in line for line in result.messages)
 
 
 def slopes(slope: float) -> Result:
@@ -168,7 +169,7 @@ def test_a_map_that_keeps_its_states_does_not_leak() -> None:
     result = slopes(2.0)
     assert result.outcome == "one-regime"
     share = result.events["right"].share
-    assert_agrees(share.value, 0.7, share.error)
+    assert_agrees(share.value, 0.7, sampling(share))
 
 
 def test_a_map_that_loses_every_pilot_trajectory_is_refused() -> None:
@@ -193,15 +194,15 @@ def test_what_a_box_cuts_off_a_heavy_tail_is_outside_and_counted() -> None:
     assert result.outcome == "one-regime"
     allowance = 0.02 / 4.0 / math.pi
     outside = 1.0 - 2.0 / math.pi * math.atan(10.0)
-    assert_agrees(result.outside_share.value, outside, result.outside_share.error, allowance=allowance)
+    assert_agrees(result.outside_share.value, outside, sampling(result.outside_share), allowance=allowance)
     for name in ("A", "B", "C", "D"):
         share = result.events[name].share
-        assert_agrees(share.value, reference("P09-boole-cauchy", f"share {name}"), share.error, allowance=allowance)
+        assert_agrees(share.value, reference("P09-boole-cauchy", f"share {name}"), sampling(share), allowance=allowance)
     # the events beyond the domain are counted along the bursts: C lies wholly outside
     assert result.events["C"].share.value > 0.03
     assert sum(result.regimes[0].mass) == pytest.approx(1.0 - result.outside_share.value, abs=1e-12)
     with pytest.raises(AssertionError):
-        assert_agrees(0.0, outside, result.outside_share.error, allowance=allowance)
+        assert_agrees(0.0, outside, sampling(result.outside_share), allowance=allowance)
 
 
 @pytest.mark.parametrize("duration", [0.5, 0.1])
@@ -217,18 +218,17 @@ def test_a_domain_narrower_than_a_gaussian_law_keeps_its_shares(duration: float)
     deviation = math.sqrt(reference("P16-ou", "variance x"))
     outside = sum(0.5 * math.erfc(end / deviation / math.sqrt(2.0)) for end in (1.4, 1.1))
     share = result.outside_share
-    assert_agrees(share.value, outside, share.error, allowance=5e-3 * outside)
+    assert_agrees(share.value, outside, sampling(share), allowance=5e-3 * outside)
     for name in ("A", "B", "D", "E"):
         truth, found = reference("P16-ou", f"share {name}"), result.events[name].share
-        assert_agrees(found.value, truth, found.error, allowance=5e-3 * truth)
+        assert_agrees(found.value, truth, sampling(found), allowance=5e-3 * truth)
 
 
 # ------------------------------------------------------------------------------ rare and rough events
 
 
 def test_an_event_never_seen_has_an_upper_bound_that_holds() -> None:
-    tables = TABLES["P16-ou"] | {"events": {"far": {"when": "x > 4.5"}}}
-    share = perdure.estimate(Case(**tables, **OU_SMALL)).events["far"].share
+    share = perdure.estimate(reference_case("P16-ou", **OU_SMALL)).events["far"].share
     truth = 0.5 * math.erfc(4.1 / math.sqrt(2.0 * reference("P16-ou", "variance x")))
     assert share.value is None
     assert share.low == 0.0

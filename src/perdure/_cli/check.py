@@ -8,9 +8,9 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
+from perdure._cli.invocation import verbose_option
 from perdure._cli.output import json_text, print_text
 from perdure._cli.rounding import seconds_text
-from perdure._cli.session import verbose_option
 
 if TYPE_CHECKING:
     from perdure._case import Case

@@ -14,9 +14,9 @@ import click
 
 from perdure import __version__
 from perdure._cli.check import check
+from perdure._cli.invocation import Invocation
 from perdure._cli.output import is_shortage, print_problems
 from perdure._cli.run import run
-from perdure._cli.session import Session
 from perdure._cli.show import show
 from perdure.errors import PerdureError
 
@@ -52,12 +52,12 @@ def main(arguments: Sequence[str] | None = None) -> int:
     arguments : sequence of str or None
         Without the name of the program; None takes those of the process.
     """
-    session = Session()
+    invocation = Invocation()
     with _sigterm_ends():
         try:
             color = False if os.environ.get("NO_COLOR") else None
             argv = None if arguments is None else list(arguments)
-            status = cli.main(argv, prog_name="perdure", standalone_mode=False, obj=session, color=color)
+            status = cli.main(argv, prog_name="perdure", standalone_mode=False, obj=invocation, color=color)
         except click.ClickException as error:
             return _refuse(error)
         except (click.Abort, KeyboardInterrupt):
@@ -67,14 +67,14 @@ def main(arguments: Sequence[str] | None = None) -> int:
             print_problems("ended by SIGTERM; density files are written whole or not at all")
             return STOPPED
         except PerdureError as error:
-            _show_traceback(session)
+            _show_traceback(invocation)
             print_problems(str(error))
             return error.exit_status
         except MemoryError:
             print_problems(_MEMORY_ADVICE)
             return STOPPED
         except Exception as fault:
-            return _fault(fault, session)
+            return _fault(fault, invocation)
     return status if isinstance(status, int) else DONE
 
 
@@ -89,21 +89,21 @@ def _refuse(error: click.ClickException) -> int:
     return WRONG
 
 
-def _fault(fault: Exception, session: Session) -> int:
+def _fault(fault: Exception, invocation: Invocation) -> int:
     """Tell of an exception that nobody meant to raise."""
     if isinstance(fault, OSError) and is_shortage(fault):
         print_problems(f"out of resources ({fault.strerror}); free some, then run again")
         return STOPPED
-    _show_traceback(session)
+    _show_traceback(invocation)
     kind, text = type(fault).__name__, " ".join(str(fault).split())
-    advice = "" if session.verbose else "; -v adds the traceback"
+    advice = "" if invocation.verbose else "; -v adds the traceback"
     print_problems(f"a fault of perdure, please report it with the case file: {kind}: {text}{advice}")
     return FAULT
 
 
-def _show_traceback(session: Session) -> None:
+def _show_traceback(invocation: Invocation) -> None:
     """Print the traceback of the exception being handled, if -v asks for it."""
-    if session.verbose:
+    if invocation.verbose:
         import traceback
 
         traceback.print_exc()

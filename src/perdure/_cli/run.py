@@ -10,9 +10,9 @@ from typing import TYPE_CHECKING
 
 import click
 
+from perdure._cli.invocation import verbose_option
 from perdure._cli.output import json_text, print_problems, print_text
 from perdure._cli.progress import reporter_for
-from perdure._cli.session import verbose_option
 from perdure._cli.table import results_text
 from perdure.errors import UsageError
 

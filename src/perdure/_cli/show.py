@@ -6,8 +6,8 @@ from pathlib import Path
 
 import click
 
+from perdure._cli.invocation import verbose_option
 from perdure._cli.output import json_text, print_text
-from perdure._cli.session import verbose_option
 from perdure._cli.table import results_text
 
 

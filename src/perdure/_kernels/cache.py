@@ -124,7 +124,7 @@ def warm(advance: Callable[..., int], spec: KernelSpec) -> None:
         np.zeros((spec.n_sum, 1)),
         np.zeros((1, d, 1), dtype=np.uint16),
         np.zeros(1, dtype=np.uint64),
-        np.ones(max(len(spec.parameters), 1)),
+        np.ones(max(len(spec.parameters) + len(spec.observables), 1)),
         1e-3,
         1,
         1,

@@ -5,6 +5,10 @@ are held in lanes, one row of a flat buffer per coordinate; the loop over steps 
 inside, and everything of a step (right-hand side, event tests, sums) stands in that inner loop without a branch,
 so that the compiler turns it into vector instructions. A flat buffer with rows of constant length, rather than
 an array per coordinate, spares the run-time overlap tests that would stop it from doing so.
+
+Sums are taken from the second step of a burst on (unless it has but one): the seed, laid uniformly in its cell, is not
+a state of the long run, and neither is an entry from it. Observables are summed about a centre, which follows the
+parameters in their array: a variance beside a large mean keeps its digits.
 """
 
 from __future__ import annotations
@@ -19,7 +23,7 @@ from perdure._kernels.schemes import SCHEMES, step_lines
 
 __all__ = ["LANES", "TEMPLATE_VERSION", "KernelSpec", "module_source"]
 
-TEMPLATE_VERSION = 1
+TEMPLATE_VERSION = 2
 LANES = 64
 MARKER = "# --- copied from here ---\n"
 
@@ -147,14 +151,14 @@ def lane_body(
     for k, condition in enumerate(spec.events):
         lines += [
             f"inside = 1.0 if {condition} else 0.0",
-            f"{sums[2 * k]} += inside",
-            f"{sums[2 * k + 1]} += inside * (1.0 - {before[k]})",
+            f"{sums[2 * k]} += keep * inside",
+            f"{sums[2 * k + 1]} += keep * inside * (1.0 - {before[k]})",
             f"{before[k]} = inside",
         ]
     at = 2 * len(spec.events)
     for k, source in enumerate(spec.observables):
         lines += [
-            f"value = {source}",
+            f"value = keep * ({source} - centre_{k})",
             f"{sums[at + 2 * k]} += value",
             f"{sums[at + 2 * k + 1]} += value * value",
         ]
@@ -170,6 +174,8 @@ def module_source(spec: KernelSpec) -> str:
     n_normal, n_sign, n_uniform, group = random_layout(spec)
     random = rows.take((n_normal + n_sign + n_uniform) * group)
     constants = [f"v_{p} = parameters[{k}]" for k, p in enumerate(spec.parameters)]
+    n_parameter = len(spec.parameters)
+    constants += [f"centre_{k} = parameters[{n_parameter + k}]" for k in range(len(spec.observables))]
     constants += ["root = math.sqrt(step)", f"buf = np.zeros({max(rows.count, 1) * spec.lanes})"]
     if random:
         constants.append(f"words = np.zeros({4 * spec.lanes}, dtype=np.uint64)")
@@ -217,6 +223,7 @@ def module_source(spec: KernelSpec) -> str:
         *indented(load, 3),
         "        sample = 0",
         "        for at in range(n_step):",
+        "            keep = 0.0 if at == 0 and n_step > 1 else 1.0",
         *indented(fill, 3),
         *indented(loop, 3),
         "            if (at + 1) % stride == 0 and sample < slots.shape[0]:",

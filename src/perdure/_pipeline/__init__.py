@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import platform
 import time
+from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
 
@@ -17,7 +18,7 @@ from perdure._pipeline.watch import Clock, Progress, silent
 from perdure._records import CaseRecord, Estimate, Floats, Integers, Plan, Quantity, Regime
 from perdure._result import Result
 from perdure._sampling import kernel_for
-from perdure._spectrum import ClassSolver, absorption, period_of, visits
+from perdure._spectrum import ClassSolver, absorption, parts_without, period_of, visits
 from perdure._statistics import (
     Findings,
     marginal_numbers,
@@ -40,9 +41,10 @@ def plan(case: CaseRecord) -> Plan:
 
 def forecast_cost(case: CaseRecord, made: Plan) -> dict[str, float]:
     """Expected cells, bursts, steps, peak memory (bytes) and time (seconds on this machine) of a run."""
-    ready = Prepared(case, *kernel_for(case), made)
+    ready = Prepared(case, *kernel_for(case), made, np.zeros(len(case.observables)))
     flight, n_sum = ready.flight, ready.n_sum
-    cells = int(1.2 * made.pilot["cells_expected"])
+    # with noise the cover grows into the tails
+    cells = int((2.0 if case.system.is_noisy else 1.2) * made.pilot["cells_expected"])
     bursts = cells * made.per_cell
     centres = np.ascontiguousarray(made.grid.centres(made.seed_keys[:4096]).T)
     state = np.repeat(centres, max(1, 4096 // centres.shape[1]), axis=1)
@@ -52,7 +54,8 @@ def forecast_cost(case: CaseRecord, made: Plan) -> dict[str, float]:
     steps = bursts * made.n_step
     entries = min(bursts, cells * 64)
     memory = 2.5e8 + entries * (8 + 2 * made.n_replicate) + cells * (made.n_replicate * n_sum * 24 + 800)
-    seconds = 2.0 + 1.8 * steps / rate / max(os.cpu_count() or 1, 1) + entries * 1e-6
+    solves = entries * (n_sum + 32) * 40 * 1e-9
+    seconds = 3.0 + 1.8 * steps / rate / max(os.cpu_count() or 1, 1) + entries * 1e-6 + solves
     return {"cells": cells, "bursts": bursts, "steps": steps, "memory_bytes": memory, "seconds": seconds}
 
 
@@ -95,20 +98,18 @@ def estimate(
     ends = (*members, *(cells for cells in classes.members if cells[0] >= n))
     basins = absorption(transition, ends)[:, : len(members)] if len(ends) > 1 or classes.leaks.any() else None
     weights = regime_weights(transition, ends, basins, visits, n)
-    regimes, outside, rough = [], [], False
+    judged = []
     for k, cells in enumerate(members):
         report("regime", k, len(members))
-        regime, share, is_rough = regime_of(ready, done, transition, cells, weights[k], clock)
-        regimes.append(regime)
-        outside.append(share)
-        rough |= is_rough
-    order = sorted(range(len(regimes)), key=lambda k: -(regimes[k].weight.value or 0.0))
+        judged.append(regime_of(ready, done, transition, cells, weights[k], clock))
+    order = sorted(range(len(judged)), key=lambda k: -(weights[k].value or 0.0))
     state = Findings(
         ready.plan,
         done.counts,
-        [regimes[k] for k in order],
+        [judged[k].regime for k in order],
         classes.leaks,
-        rough,
+        any(item.rough for item in judged),
+        max((item.apart for item in judged), default=0.0),
         done.settled,
         pilot_share(ready.plan, done, members),
     )
@@ -125,9 +126,9 @@ def estimate(
             checks_passed=passed,
             grid=done.grid,
             keys=done.keys,
-            regimes=tuple(regimes[k] for k in order),
+            regimes=tuple(judged[k].regime for k in order),
             basins=None if basins is None else basins[:n, order].astype(np.float32),
-            outside_share=outside[order[0]] if order else no_share(),
+            outside_share=judged[order[0]].outside if order else no_share(),
             tally=done.all.tally if case.output.matrix else None,
             timings=clock.seconds,
             packages=versions(),
@@ -148,6 +149,24 @@ def pilot_share(made: Plan, done: Sampled, members: list[Integers]) -> float:
     return float(made.seed_share[np.isin(made.seed_keys, held)].sum())
 
 
+@dataclass(frozen=True)
+class Judged:
+    """A regime, its share of time outside, and what speaks against it.
+
+    Attributes
+    ----------
+    rough : bool
+        Solves behind the error bars stopped above their tolerance.
+    apart : float
+        Mass of the second largest part of its cells that only the outside state links with the largest.
+    """
+
+    regime: Regime
+    outside: Quantity
+    rough: bool
+    apart: float
+
+
 def regime_of(
     ready: Prepared,
     done: Sampled,
@@ -155,13 +174,20 @@ def regime_of(
     members: Integers,
     weight: Quantity,
     clock: Clock,
-) -> tuple[Regime, Quantity, bool]:
-    """Long-run numbers of one closed class, its share of time outside, and whether its error bars are rough."""
+) -> Judged:
+    """Long-run numbers of one closed class."""
     case, found = ready.case, done.all
     solver = ClassSolver(transition, members)
     clock.stage("stationary mass")
     events, observables = regime_numbers(
-        case, ready.plan, transition, solver.mass, found.sums, solver.adjoint, coarser_masses(done, members)
+        case,
+        ready.plan,
+        transition,
+        solver.mass,
+        found.sums,
+        solver.adjoint,
+        coarser_masses(done, members),
+        ready.centres,
     )
     share = outside_quantity(ready.plan, transition, solver.mass, done.has_outside, solver.adjoint)
     clock.stage("numbers")
@@ -188,7 +214,11 @@ def regime_of(
         observables=observables,
         marginals=marginals,
     )
-    return regime, share, solver.rough
+    apart = 0.0
+    if len(inside) < len(members):
+        parts = parts_without(found.tally, members, solver.mass, len(done.keys))
+        apart = float(parts[1]) if len(parts) > 1 else 0.0
+    return Judged(regime, share, solver.rough, apart)
 
 
 def coarser_masses(done: Sampled, members: Integers) -> Floats:

@@ -26,7 +26,7 @@ from perdure._sampling import (
     survey,
 )
 from perdure._streams import generator, seed_words
-from perdure.errors import CaseError
+from perdure.errors import CaseError, NoAttractorError
 
 __all__ = ["Prepared", "prepare"]
 
@@ -42,10 +42,16 @@ class Prepared:
     advance: Callable[..., int]
     n_sum: int
     plan: Plan
+    centres: Floats
 
     @property
     def flight(self) -> Flight:
         return Flight(self.advance, parameter_values(self.case), self.n_sum, generator(self.case.seed, "pilot"))
+
+    @property
+    def parameters(self) -> Floats:
+        """What the kernel is given: parameters and the centres of the observables."""
+        return parameter_values(self.case, self.centres)
 
     @property
     def cells(self) -> Boxes:
@@ -67,7 +73,10 @@ def prepare(case: CaseRecord, progress: Progress, clock: Clock) -> Prepared:
     clock.stage("compile")
     progress("pilot", 0, 1)
     flight = Flight(advance, parameter_values(case), n_sum, generator(case.seed, "pilot"))
-    pilot = survey(flight, case.system, case.cells, case.bursts)
+    try:
+        pilot = survey(flight, case.system, case.cells, case.bursts)
+    except NoAttractorError as error:
+        raise NoAttractorError(f"{case.source_name}, {error}") from error
     ends = domain(case.system, case.cells, pilot)
     if not np.all(ends.lower < ends.upper):
         worst = case.system.state[int(np.argmin(ends.upper - ends.lower))]
@@ -90,7 +99,16 @@ def prepare(case: CaseRecord, progress: Progress, clock: Clock) -> Prepared:
         )
     made = make_plan(case, pilot, flight, scheme_of(case), grid, ends, visited, found)
     clock.stage("pilot")
-    return Prepared(case, advance, n_sum, made)
+    return Prepared(case, advance, n_sum, made, centres_of(case, flight, pilot))
+
+
+def centres_of(case: CaseRecord, flight: Flight, pilot: Pilot) -> Floats:
+    """Median of each observable over states of the pilot, shape (n_observable,); 0 where it is not finite."""
+    first = 2 * len(case.events)
+    points = pilot.points[:, :: max(1, pilot.points.shape[1] // 4096)]
+    seen = flight.flown(points, pilot.step, 1)[1][first::2]
+    centre = np.median(seen, axis=1) if len(seen) else np.zeros(0)
+    return np.where(np.isfinite(centre), centre, 0.0)
 
 
 def visited_cells(case: CaseRecord, cells: Boxes, pilot: Pilot, flight: Flight) -> Visited:

@@ -13,7 +13,7 @@ from perdure._partition import Cover, hull, tightened
 from perdure._pipeline.prepare import Prepared
 from perdure._pipeline.watch import Progress
 from perdure._records import BoxGrid, Exits, Integers
-from perdure._sampling import BurstSampler, bursts_per_cell, outside_row, parameter_values
+from perdure._sampling import BurstSampler, bursts_per_cell, outside_row
 from perdure._spectrum import Classes, ClassSolver, closed_classes
 from perdure._streams import generator
 from perdure._transitions import Collected, RowStore, TransitionMatrix, with_outside, without
@@ -45,8 +45,8 @@ class Sampled:
 
 
 def sampler_of(ready: Prepared) -> BurstSampler:
-    values = parameter_values(ready.case)
-    return BurstSampler(ready.advance, ready.cells, ready.plan, values, ready.n_sum, ready.case.output.intervals)
+    n_interval = ready.case.output.intervals
+    return BurstSampler(ready.advance, ready.cells, ready.plan, ready.parameters, ready.n_sum, n_interval)
 
 
 def sample(ready: Prepared, workers: int, progress: Progress) -> Sampled:
@@ -145,12 +145,19 @@ def sample_all(ready: Prepared, workers: int, progress: Progress) -> tuple[Prepa
     done = follow_outside(ready, sample(ready, workers, progress), progress)
     classes = closed_classes(done.all.tally)
     if len(classes.members) > 1 and not ready.case.system.is_flow and ready.case.bursts.steps is None:
-        ready = one_step(ready)
-        done = follow_outside(ready, sample(ready, workers, progress), progress)
-        classes = closed_classes(done.all.tally)
+        single = one_step(ready)
+        check = follow_outside(single, sample(single, workers, progress), progress)
+        found = closed_classes(check.all.tally)
+        if len(found.members) != len(classes.members):
+            ready, done, classes = single, check, found
     if len(classes.members) < 2:
         return ready, done, classes
-    between = hull(ready.plan.grid, done.lattice_keys, MOST_HULL)
+    whole = float(np.prod(ready.plan.grid.counts.astype(float)))
+    if whole <= MOST_HULL:
+        # a domain that was given, and is taken whole
+        between: Integers | None = np.arange(int(whole), dtype=np.int64)
+    else:
+        between = hull(ready.plan.grid, done.lattice_keys, MOST_HULL)
     if between is None or len(between) == len(done.keys):
         return ready, done, classes
     per_cell, n_replicate, _ = bursts_per_cell(ready.case.bursts, len(between), ready.plan.n_step)

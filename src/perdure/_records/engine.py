@@ -73,7 +73,7 @@ class Plan:
     seed_keys : ndarray of int64
         Sorted keys of the cells that pilot trajectories visited.
     seed_share : ndarray, shape of `seed_keys`
-        Part of the pilot's points in each.
+        Part of the pilot's points inside the domain in each.
     step : float
         Time step (1 for maps). Unit: time.
     n_step : int

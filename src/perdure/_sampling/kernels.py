@@ -20,10 +20,12 @@ def scheme_of(case: CaseRecord) -> str:
     return case.bursts.scheme or usual[case.system.kind]
 
 
-def parameter_values(case: CaseRecord) -> Floats:
-    """Values in the order of the kernel, shape (n_parameter,), at least one."""
-    values = [p.value for p in case.system.parameters.values()]
-    return np.array(values or [0.0])
+def parameter_values(case: CaseRecord, centres: Floats | None = None) -> Floats:
+    """Parameters, then the centres of the observables (0 if None), in the order of the kernel; at least one number."""
+    values = np.array([p.value for p in case.system.parameters.values()], dtype=float)
+    centres = np.zeros(len(case.observables)) if centres is None else centres
+    joined = np.concatenate([values, centres])
+    return joined if len(joined) else np.zeros(1)
 
 
 def kernel_spec(case: CaseRecord) -> KernelSpec:

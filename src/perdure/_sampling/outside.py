@@ -20,7 +20,10 @@ from perdure._sampling.bursts import BlockRows, BurstSampler
 __all__ = ["OutsideRow", "outside_row"]
 
 PARTICLES = 8192
-SWEEPS, DROPPED = 24, 8
+# Sweeps dropped at first and kept; they start again until the particles have settled, or up to so many sweeps or steps.
+DROPPED, KEPT, MOST_SWEEPS, MOST_STEPS = 8, 16, 2000, 2e9
+# Sweeps before the kept ones, in units of the mean stay outside.
+STAYS = 10.0
 
 
 @dataclass(frozen=True)
@@ -34,8 +37,8 @@ class OutsideRow:
     n_burst : int
         Bursts pooled.
     settled : bool
-        False if excursions still lengthened: the part of particles that stay outside differed between the two
-        halves of the kept sweeps by more than five standard errors and one percent of those that come back.
+        False if excursions still lengthened after all sweeps: the part of particles that stay outside differed between
+        the two halves of the kept ones by more than five standard errors and one percent of those that come back.
     """
 
     row: BlockRows
@@ -54,7 +57,8 @@ def outside_row(
     pools = [drawn(np.flatnonzero(exits.replicate == r), weight, rng) for r in range(n_rep)]
     staying: list[Floats] = [np.zeros((len(exits.point), 0)) for _ in range(n_rep)]
     rows, stay = [], []
-    for sweep in range(SWEEPS):
+    most = int(np.clip(MOST_STEPS / (PARTICLES * sampler.plan.n_step), KEPT + DROPPED, MOST_SWEEPS))
+    for sweep in range(most):
         state = np.empty((len(exits.point), size * n_rep))
         for r in range(n_rep):
             fresh = rng.choice(pools[r], size - staying[r].shape[1])
@@ -63,13 +67,23 @@ def outside_row(
         burst, point = sampler.strays(state, known)
         staying = [point[:, burst // size == r] for r in range(n_rep)]
         stay.append(len(burst) / (size * n_rep))
-        if sweep >= DROPPED:
-            rows.append(block)
-    half = len(rows) // 2
-    early, late = np.mean(stay[DROPPED : DROPPED + half]), np.mean(stay[DROPPED + half :])
-    error = np.sqrt(late * (1.0 - late) * 2.0 / (half * size * n_rep))
-    settled = bool(abs(late - early) <= 5.0 * error + 0.01 * (1.0 - late))
-    return OutsideRow(pooled(rows), len(rows) * size * n_rep, settled)
+        rows.append(block)
+        if len(rows) == KEPT + DROPPED:
+            rows, stay = rows[DROPPED:], stay[DROPPED:]
+            long_enough = (sweep + 1) * (1.0 - float(np.mean(stay))) >= STAYS
+            if long_enough and has_settled(stay, size * n_rep):
+                return OutsideRow(pooled(rows), len(rows) * size * n_rep, True)
+            # excursions last longer than the sweeps so far: these are dropped too
+            rows, stay = rows[KEPT - DROPPED :], stay[KEPT - DROPPED :]
+    return OutsideRow(pooled(rows), len(rows) * size * n_rep, False)
+
+
+def has_settled(stay: list[float], n_particle: int) -> bool:
+    """Whether the part of particles that stay outside is the same in both halves of the sweeps."""
+    half = len(stay) // 2
+    early, late = float(np.mean(stay[:half])), float(np.mean(stay[half:]))
+    error = np.sqrt(late * (1.0 - late) * 2.0 / (half * n_particle))
+    return bool(abs(late - early) <= 5.0 * error + 0.01 * (1.0 - late))
 
 
 def drawn(pool: Integers, weight: Floats, rng: np.random.Generator) -> Integers:

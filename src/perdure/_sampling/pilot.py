@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from perdure._records import BurstOptions, CellOptions, Floats, System
 from perdure.errors import NoAttractorError
 
-__all__ = ["Flight", "Pilot", "burst_length", "further", "local_rate", "survey", "time_step"]
+__all__ = ["Flight", "Pilot", "burst_length", "further", "local_rate", "pace", "survey", "time_step"]
 
 Advance = Callable[..., int]
 
@@ -72,25 +72,21 @@ class Flight:
         self.n_sum = n_sum
         self.rng = rng
 
-    def fly(self, state: Floats, step: float, n_step: int, stream: np.ndarray | None = None) -> Floats:
+    def fly(self, state: Floats, step: float, n_step: int, stream: NDArray[np.uint64] | None = None) -> Floats:
         """States after `n_step` steps from state (n_dim, n); nan where a trajectory blew up."""
+        return self.flown(state, step, n_step, stream)[0]
+
+    def flown(
+        self, state: Floats, step: float, n_step: int, stream: NDArray[np.uint64] | None = None
+    ) -> tuple[Floats, Floats]:
+        """The states, and the kernel's sums (n_sum, n) on the way."""
         n_dim, n = state.shape
-        out = np.ascontiguousarray(state, dtype=float).copy()
-        words = self.rng.integers(0, 2**63, n).astype(np.uint64) if stream is None else stream
-        self.advance(
-            out,
-            np.zeros((self.n_sum, n)),
-            np.zeros((0, n_dim, n), dtype=np.uint16),
-            words,
-            self.parameters,
-            step,
-            n_step,
-            n_step,
-            np.zeros(n_dim),
-            np.ones(n_dim),
-            3.0,
-        )
-        return out
+        out, sums = np.ascontiguousarray(state, dtype=float).copy(), np.zeros((self.n_sum, n))
+        words = np.asarray(self.rng.integers(0, 2**63, n)).astype(np.uint64) if stream is None else stream
+        slots = np.zeros((0, n_dim, n), dtype=np.uint16)
+        axis = np.zeros(n_dim), np.ones(n_dim)
+        self.advance(out, sums, slots, words, self.parameters, step, n_step, n_step, *axis, 3.0)
+        return out, sums
 
 
 def dispersed_starts(system: System, cells: CellOptions, rng: np.random.Generator) -> Floats:
@@ -165,6 +161,27 @@ def local_rate(flight: Flight, points: Floats) -> float:
     return max(rate, 1e-9)
 
 
+def pace(flight: Flight, system: System, state: Floats, bursts: BurstOptions) -> tuple[float, float]:
+    """Rate of the dynamics (1 / time) and a time step for plain trajectories, from states (n_dim, n).
+
+    The step is 0.05 over the local rate, and so short that no component moves by more than a tenth of its spread (half
+    of it with noise) in a step: neighbours that move alike have a local rate of 0. Lengths are tried from the shortest
+    up, because a periodic component that goes round several times seems to stand still.
+    """
+    rate = local_rate(flight, state)
+    step = min(0.05 / rate, bursts.step or np.inf)
+    most = 0.5 if system.is_noisy else 0.1
+    spread = state.std(axis=1)
+    spread[spread == 0.0] = np.inf
+    for halvings in range(70, -1, -1):
+        moved = np.abs(flight.fly(state, step * 2.0**-halvings, 1) - state)
+        moved = np.where(np.isfinite(moved), moved, np.inf)
+        if np.any(np.quantile(moved, 0.75, axis=1) > most * spread):
+            step *= 2.0 ** -(halvings + 1)
+            break
+    return max(rate, 0.05 / step), step
+
+
 def survey(flight: Flight, system: System, cells: CellOptions, bursts: BurstOptions) -> Pilot:
     """Points of the long run, from dispersed starts.
 
@@ -178,8 +195,8 @@ def survey(flight: Flight, system: System, cells: CellOptions, bursts: BurstOpti
     for _ in range(6 if system.is_flow else 1):
         # from the starts, then from where they went, until the rate settles
         if system.is_flow:
-            before, rate = rate, local_rate(flight, state)
-            step = min(0.05 / rate, bursts.step or np.inf)
+            before = rate
+            rate, step = pace(flight, system, state, bursts)
             if 0.8 < rate / before < 1.25:
                 break
         state = near_columns(long_flight(flight, system, state, step, 400))[:, : 4 * N_LANE]
@@ -188,16 +205,21 @@ def survey(flight: Flight, system: System, cells: CellOptions, bursts: BurstOpti
     if state.shape[1] >= 2:
         state = long_flight(flight, system, state, step, 20_000 if system.is_flow else 2000)[:, :N_LANE]
     if system.is_flow and state.shape[1] >= 2:
-        rate = local_rate(flight, state)
-        step = min(0.05 / rate, bursts.step or np.inf)
+        rate, step = pace(flight, system, state, bursts)
     n_kept = state.shape[1]
     if n_kept < 2:
         raise NoAttractorError(
             f"[system] equations: {N_START - n_kept} of {N_START} pilot trajectories from dispersed starts left all "
-            "bounds or became non-finite; allowed: a system with a bounded long run; check the equations and "
-            "parameters, or give [cells] lower and upper so that the starts lie in the basin"
+            "bounds or became non-finite (a number too large, 0/0, or log or sqrt of a negative number); allowed: a "
+            "system with a bounded long run; check the equations and parameters, or give [cells] lower and upper so "
+            "that the starts lie in the basin"
         )
     records = recorded(flight, system, state, step)
+    for _ in range(6):
+        if not shrinking(records):
+            break
+        state = long_flight(flight, system, records[-1], step, 100_000 if system.is_flow else 10_000)
+        records = recorded(flight, system, state, step)
     settled = ~travelling(records)
     records = records[:, :, settled] if settled.sum() >= 2 else records
     n_kept = records.shape[2]
@@ -205,6 +227,13 @@ def survey(flight: Flight, system: System, cells: CellOptions, bursts: BurstOpti
     own = np.ptp(records, axis=0).max(axis=1)
     at_rest = bool(np.all(own <= 1e-3 * np.ptp(points, axis=1)))
     return Pilot(points, records[-1], rate, step, N_START, n_kept, at_rest)
+
+
+def shrinking(records: Floats) -> bool:
+    """Whether the range of all trajectories, records (n_record, n_dim, n_lane), still falls: a slow way in."""
+    half = len(records) // 2
+    early, late = np.ptp(records[:half], axis=(0, 2)), np.ptp(records[half:], axis=(0, 2))
+    return bool(np.any(late < 0.8 * early))
 
 
 def recorded(flight: Flight, system: System, state: Floats, step: float) -> Floats:
@@ -278,11 +307,11 @@ def time_step(
     """Time step, steps per burst, and the reason.
 
     Without noise the step is halved until burst end points agree: the 99 percent quantile of the change on halving
-    is below a hundredth of a cell, from `FEWEST_STEPS` a burst on. With noise the step times the local rate is 0.05
-    (weak order 2) or 0.002: 0.06 and 0.1 percent of the variance of an Ornstein-Uhlenbeck process.
+    is below a hundredth of a cell, from `FEWEST_STEPS` a burst on. With noise the step times the local rate is 0.025
+    (weak order 2) or 0.002: 0.02 and 0.1 percent of the variance of an Ornstein-Uhlenbeck process.
     """
     if noisy:
-        part = 0.05 if scheme == "weak2" else 0.002
+        part = 0.025 if scheme == "weak2" else 0.002
         n_step = max(1, int(np.ceil(duration * pilot.rate / part)))
         return duration / n_step, n_step, f"step times local rate of change {part:g} ({scheme})"
     points = pilot.points[:, :: max(1, pilot.points.shape[1] // 1024)]

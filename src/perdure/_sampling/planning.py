@@ -21,7 +21,8 @@ STEP_BUDGET, BURST_BUDGET = 1.2e9, 4e6
 FEWEST, MOST = 32, 4096
 # A range this many times that of the middle 99 percent of the states is one of heavy tails.
 HEAVY = 4.0
-# From this many cells on, their number gives the error bar its degrees of freedom: two replicates a cell do.
+# From this many cells on, their number gives the error bar its degrees of freedom, and four replicates a cell do; with
+# fewer the bar would be useless where a single cell dominates.
 MANY_CELLS = 4096
 
 
@@ -122,7 +123,7 @@ def boxes_per_axis(system: System, cells: CellOptions, pilot: Pilot) -> tuple[In
 
 def bursts_per_cell(bursts: BurstOptions, n_cell: int, n_step: int) -> tuple[int, int, str]:
     """Bursts per cell, replicates, and the reason."""
-    n_replicate = 2 if n_cell >= MANY_CELLS else 8
+    n_replicate = 4 if n_cell >= MANY_CELLS else 8
     if bursts.per_cell is not None:
         per_cell = bursts.per_cell
         while per_cell % n_replicate or per_cell // n_replicate < 2:
@@ -137,7 +138,7 @@ def bursts_per_cell(bursts: BurstOptions, n_cell: int, n_step: int) -> tuple[int
     return (
         per_cell,
         n_replicate,
-        f"at most {STEP_BUDGET:g} steps and {BURST_BUDGET:g} bursts in all, between {FEWEST} and {MOST} per cell",
+        f"about {STEP_BUDGET:g} steps or {BURST_BUDGET:g} bursts from the pilot's cells, {FEWEST} to {MOST} per cell",
     )
 
 
@@ -186,7 +187,7 @@ def make_plan(
         grid=grid,
         bounded=bool(ends.closed.any()),
         seed_keys=seed_keys,
-        seed_share=visited.n_hit / visited.n_point,
+        seed_share=visited.n_hit / visited.n_hit.sum(),
         step=step,
         n_step=n_step,
         per_cell=per_cell,

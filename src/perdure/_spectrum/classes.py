@@ -10,9 +10,9 @@ from numpy.typing import NDArray
 from scipy.sparse import csr_array
 from scipy.sparse.csgraph import connected_components, dijkstra
 
-from perdure._records import Integers, Tally
+from perdure._records import Floats, Integers, Tally
 
-__all__ = ["Classes", "closed_classes", "period_of"]
+__all__ = ["Classes", "closed_classes", "parts_without", "period_of"]
 
 
 @dataclass(frozen=True)
@@ -55,6 +55,16 @@ def closed_classes(tally: Tally) -> Classes:
     groups = [np.sort(group) for group in np.split(order, cuts) if len(group) and not is_open[label[group[0]]]]
     groups.sort(key=lambda group: (-len(group), int(group[0])))
     return Classes(tuple(group.astype(np.int64) for group in groups), leaks)
+
+
+def parts_without(tally: Tally, members: Integers, mass: Floats, cell: int) -> Floats:
+    """Masses of the parts into which a closed class falls when one of its cells is taken out, largest first.
+
+    mass (n_cell,). A part is a strongly connected component of the cells that are left.
+    """
+    rest = members[members != cell]
+    count, label = connected_components(pattern(tally)[rest][:, rest], directed=True, connection="strong")
+    return np.asarray(np.sort(np.bincount(label, weights=mass[rest], minlength=count))[::-1], dtype=float)
 
 
 def period_of(tally: Tally, members: Integers) -> int:

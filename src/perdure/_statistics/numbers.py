@@ -32,11 +32,17 @@ class Averages:
         The same with cells of twice and four times the width; shape (0, n_sum) where that is not known.
     effective : float
         Bursts that count, 1 / sum(mass^2 / bursts) (L. Kish's effective sample size).
+    hits : ndarray, shape (n_sum,)
+        The sums over all bursts: for entries, how many were seen.
+    at_rest : bool
+        A single cell of a system without noise: what enters an event there is seeds that settle.
     """
 
     value: Floats
     coarser: Floats
     effective: float
+    hits: Floats
+    at_rest: bool
 
     def cells(self, number: Callable[[Floats], float]) -> float | None:
         """Part of the error of a number from cell size; `number` makes it from the averages."""
@@ -47,9 +53,13 @@ class Averages:
 
 
 def per_burst(sums: Floats, transition: Transition, plan: Plan, n_event: int) -> Floats:
-    """Mean along the bursts, shape (n_cell, n_replicate, n_sum): shares and means per step, entries per burst."""
-    scale = np.full(sums.shape[2], 1.0 / plan.n_step)
-    scale[1 : 2 * n_event : 2] = 1.0
+    """Mean along the bursts, shape (n_cell, n_replicate, n_sum): shares and means per step, entries per burst.
+
+    The kernel sums from the second step on, unless a burst has but one.
+    """
+    n_summed = max(plan.n_step - 1, 1)
+    scale = np.full(sums.shape[2], 1.0 / n_summed)
+    scale[1 : 2 * n_event : 2] = plan.n_step / n_summed
     return np.asarray(sums * scale / transition.tally.bursts[:, :, None])
 
 
@@ -83,6 +93,7 @@ def regime_numbers(
     sums: Floats,
     adjoint: Callable[[Floats], Floats],
     lifted: Floats,
+    centres: Floats,
 ) -> tuple[Mapping[str, EventResult], Mapping[str, ObservableResult]]:
     """All named numbers of one regime.
 
@@ -96,6 +107,8 @@ def regime_numbers(
         Solves (I - P) h = g - mu(g) for columns g.
     lifted : ndarray, shape (2, n_cell)
         Stationary mass with cells of twice and four times the width; shape (0, n_cell) where that is not known.
+    centres : ndarray, shape (n_observable,)
+        What the kernel took off each observable before summing.
     """
     n_event = len(case.events)
     means = per_burst(sums, transition, plan, n_event)
@@ -103,17 +116,26 @@ def regime_numbers(
     pooled = np.einsum("irg,ir->ig", means, weight)
     held = np.where(mass[:, None] > 0.0, pooled, 0.0)
     value = mass @ held
-    averages = Averages(value, lifted @ held, 1.0 / float(np.sum(mass**2 / transition.tally.bursts.sum(axis=1))))
+    averages = Averages(
+        value,
+        lifted @ held,
+        1.0 / float(np.sum(mass**2 / transition.tally.bursts.sum(axis=1))),
+        sums[mass > 0.0].sum(axis=(0, 1)),
+        int(np.sum(mass > 0.0)) == 1 and not case.system.is_noisy,
+    )
     fine = np.isfinite(value)
     h = np.zeros_like(pooled)
     if fine.any():
         h[:, fine] = adjoint(np.where(np.isfinite(pooled[:, fine]), pooled[:, fine], 0.0))
     mix, names = mixes(case, plan, averages)
     safe = np.where(np.isfinite(means), means, 0.0)
-    error, freedom = errors_of(transition, mass, h, safe, mix)
+    with np.errstate(over="ignore", invalid="ignore"):
+        error, freedom = errors_of(transition, mass, h, safe, mix)
     at = {name: (float(error[k]), float(freedom[k])) for k, name in enumerate(names)}
     events = {e.name: event_result(case, plan, averages, k, at) for k, e in enumerate(case.events)}
-    observables = {o.name: observable_result(case, averages, k, at) for k, o in enumerate(case.observables)}
+    observables = {
+        o.name: observable_result(case, averages, k, at, float(centres[k])) for k, o in enumerate(case.observables)
+    }
     return events, observables
 
 
@@ -158,9 +180,13 @@ def event_result(
     seen = f"in {averages.effective:.3g} effective bursts"
     if share == 0.0:
         quantity = Quantity(None, 0.0, bound, {}, "1", f"never seen {seen}: upper bound")
+    elif entries == 0.0 and share > 1.0 - 1e-12:
+        quantity = Quantity(1.0, 1.0 - bound, 1.0, {"sampling": 0.0}, "1", f"always seen {seen}: lower bound")
     else:
         quantity = interval(share, *at["share", k], "1", "share", averages.cells(lambda v: v[2 * k]))
     refusal = why_no_rate(case, k)
+    if averages.at_rest and not refusal:
+        refusal = "the regime is a single cell: entries would be those of seeds that settle in it"
     if refusal:
         return EventResult(
             quantity,
@@ -172,18 +198,26 @@ def event_result(
         rate = Quantity(None, 0.0, bound / tau, {}, rate_unit, f"no entry seen {seen}: upper bound")
         period = Quantity(None, tau / bound, None, {}, time, f"no entry seen {seen}: lower bound")
         return EventResult(quantity, rate, period, none)
+
+    def number(name: str, value: float, unit: str, of: Callable[[Floats], float]) -> Quantity:
+        error, freedom = at[name, k]
+        return interval(value, counted(error, value, hits), freedom, unit, "positive", averages.cells(of))
+
+    hits = float(averages.hits[2 * k + 1])
     return EventResult(
         quantity,
-        interval(entries / tau, *at["rate", k], rate_unit, "positive", averages.cells(lambda v: v[2 * k + 1] / tau)),
-        interval(tau / entries, *at["period", k], time, "positive", averages.cells(lambda v: tau / v[2 * k + 1])),
-        interval(
-            share * tau / entries,
-            *at["spell", k],
-            time,
-            "positive",
-            averages.cells(lambda v: v[2 * k] * tau / v[2 * k + 1]),
-        ),
+        number("rate", entries / tau, rate_unit, lambda v: v[2 * k + 1] / tau),
+        number("period", tau / entries, time, lambda v: tau / v[2 * k + 1]),
+        number("spell", share * tau / entries, time, lambda v: v[2 * k] * tau / v[2 * k + 1]),
     )
+
+
+def counted(error: float, value: float, hits: float) -> float:
+    """Standard error, but not below that of a Poisson count while fewer than 100 entries were seen.
+
+    With all of a few entries in one replicate the first-order error of a ratio cancels to nothing.
+    """
+    return max(error, value / np.sqrt(hits)) if 0.0 < hits < 100.0 else error
 
 
 def why_no_rate(case: CaseRecord, k: int) -> str:
@@ -200,7 +234,7 @@ def why_no_rate(case: CaseRecord, k: int) -> str:
         return ""
     return (
         "white noise crosses a plain edge infinitely often, so a rate would depend on the step alone; state the event "
-        "with components that carry no noise, or with `until`"
+        "with components that carry no noise themselves"
     )
 
 
@@ -212,16 +246,16 @@ def is_zero(text: str) -> bool:
 
 
 def observable_result(
-    case: CaseRecord, averages: Averages, k: int, at: Mapping[tuple[str, int], tuple[float, float]]
+    case: CaseRecord, averages: Averages, k: int, at: Mapping[tuple[str, int], tuple[float, float]], centre: float
 ) -> ObservableResult:
-    """Mean and variance of observable `k`."""
+    """Mean and variance of observable `k`, whose sums were taken about `centre`."""
     first = 2 * len(case.events) + 2 * k
     mean, square = float(averages.value[first]), float(averages.value[first + 1])
     unit = case.observables[k].unit
     square_unit = unit if unit == "1" else f"({unit})^2"
     spread = max(square - mean * mean, 0.0)
     return ObservableResult(
-        interval(mean, *at["mean", k], unit, "real", averages.cells(lambda v: v[first])),
+        interval(centre + mean, *at["mean", k], unit, "real", averages.cells(lambda v: v[first])),
         interval(
             spread if np.isfinite(square) else np.nan,
             *at["variance", k],

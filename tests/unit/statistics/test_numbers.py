@@ -43,7 +43,7 @@ def numbers(case: Case, sums: np.ndarray) -> tuple[dict[str, EventResult], dict[
     solver = ClassSolver(transition, np.arange(2))
     np.testing.assert_allclose(solver.mass, [1 / 3, 2 / 3])
     plan = SimpleNamespace(n_step=N_STEP, duration=TAU)
-    events, observables = regime_numbers(case, plan, transition, solver.mass, sums, solver.adjoint, NO_LADDER)  # type: ignore[arg-type]
+    events, observables = regime_numbers(case, plan, transition, solver.mass, sums, solver.adjoint, NO_LADDER, np.zeros(9))  # type: ignore[arg-type]
     return dict(events), dict(observables)
 
 

@@ -8,22 +8,22 @@ from typing import Any, TypeVar
 
 import click
 
-__all__ = ["Session", "verbose_option"]
+__all__ = ["Invocation", "verbose_option"]
 
 F = TypeVar("F", bound=Callable[..., Any])
 
 
 @dataclass
-class Session:
+class Invocation:
     """State of one call of the program; `verbose` decides whether a fault shows its traceback."""
 
     verbose: bool = False
 
 
 def _remember(context: click.Context, parameter: click.Parameter, value: bool) -> bool:
-    session = context.find_object(Session)
-    if session is not None:
-        session.verbose = value
+    invocation = context.find_object(Invocation)
+    if invocation is not None:
+        invocation.verbose = value
     return value
 
 
