@@ -107,9 +107,15 @@ def _regime_blocks(regime: Regime) -> list[list[str]]:
 
 def _rows(name: str, numbers: Iterable[tuple[str, Quantity]]) -> list[list[str]]:
     """One row per number; the name stands in the first only."""
-    return [
-        ["" if position else name, what, *quantity_cells(quantity)] for position, (what, quantity) in enumerate(numbers)
-    ]
+    rows, told = [], ""
+    for position, (what, quantity) in enumerate(numbers):
+        cells = quantity_cells(quantity)
+        if quantity.value is None and quantity.reason and cells[0] == told:
+            cells = ("none, as above", "")
+        else:
+            told = cells[0]
+        rows.append(["" if position else name, what, *cells])
+    return rows
 
 
 def _table(rows: Sequence[Sequence[str]], head: Sequence[str]) -> list[str]:
@@ -133,7 +139,8 @@ def _covered(result: Result | DensityFile) -> str:
     parts = sorted({part for number in numbers for part in number.parts})
     if set(parts) <= {"sampling"}:
         return "errors and intervals are those of sampling alone; not in them: cell size and time step"
-    missing = [name for part, name in (("cells", "cell size"), ("step", "time step")) if part not in parts]
+    steps = [("step", "time step")] if result.kind.endswith("flow") else []
+    missing = [name for part, name in (("cells", "cell size"), *steps) if part not in parts]
     rest = f"; not in them: {' and '.join(missing)}" if missing else ""
     return f"errors and intervals include: {', '.join(parts)}{rest}"
 

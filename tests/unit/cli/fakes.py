@@ -57,6 +57,7 @@ class FakeResult:
 
     title: str = "Convection loop"
     outcome: str = "one-regime"
+    kind: str = "flow"
     messages: tuple[str, ...] = ()
     checks_passed: bool = True
     caution: str = ""
