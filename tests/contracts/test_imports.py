@@ -122,9 +122,7 @@ def violations(source: str, place: str) -> list[str]:
     room = room_of(place)
     package = ".".join(["perdure", *place.split("/")[:-1]])
     found = []
-    if place not in DYNAMIC and re.search(
-        r"\bimport_module\b|\b__import__\b|\bspec_from_file_location\b", source
-    ):
+    if place not in DYNAMIC and re.search(r"\bimport_module\b|\b__import__\b|\bspec_from_file_location\b", source):
         found.append(f"{place}: imports by a name in a string")
     for item in imports_of(source, package):
         target = target_room(item.name)

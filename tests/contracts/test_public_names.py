@@ -54,9 +54,7 @@ def test_type_checkers_see_the_same_homes() -> None:
     for node in ast.walk(block):
         if isinstance(node, ast.ImportFrom):
             for alias in node.names:
-                home = (
-                    (f"perdure.{alias.name}", "") if node.module == "perdure" else (node.module, alias.name)
-                )
+                home = (f"perdure.{alias.name}", "") if node.module == "perdure" else (node.module, alias.name)
                 seen[alias.asname or alias.name] = home
     assert seen == perdure._HOMES
     assert set(seen) == set(PUBLIC) - {"__version__"}

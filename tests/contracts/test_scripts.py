@@ -73,9 +73,7 @@ def test_an_extra_is_added_and_kept(environment: ModuleType) -> None:
 
 
 @pytest.mark.parametrize("change", [{"python": "3.11.0 (another)"}, {"inputs": "0" * 64}])
-def test_another_python_or_other_packages_make_it_anew(
-    environment: ModuleType, change: dict[str, str]
-) -> None:
+def test_another_python_or_other_packages_make_it_anew(environment: ModuleType, change: dict[str, str]) -> None:
     environment.prepare()
     stamp = json.loads(environment.STAMP.read_text(encoding="utf-8"))
     environment.STAMP.write_text(json.dumps({**stamp, **change}), encoding="utf-8")
@@ -107,9 +105,7 @@ def test_a_foreign_folder_is_left_alone(environment: ModuleType, capsys: Capture
     assert "was not made by this script" in capsys.readouterr().err
 
 
-def test_inputs_follow_both_files(
-    environment: ModuleType, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_inputs_follow_both_files(environment: ModuleType, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(environment, "ROOT", tmp_path)
     monkeypatch.setattr(environment, "CONSTRAINTS", tmp_path / "constraints.txt")
     seen = set()
@@ -129,9 +125,7 @@ def test_create_empties_the_folder(environment: ModuleType, monkeypatch: pytest.
     environment._real_create({"python": sys.version})
     assert not old.exists()
     assert environment._read_stamp() == {}
-    done = subprocess.run(
-        [environment.program("python"), "-c", "import sys; print(sys.prefix)"], capture_output=True
-    )
+    done = subprocess.run([environment.program("python"), "-c", "import sys; print(sys.prefix)"], capture_output=True)
     assert Path(done.stdout.decode().strip()) == environment.ENVIRONMENT
 
 

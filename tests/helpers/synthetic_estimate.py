@@ -127,14 +127,10 @@ def make_observables(rng: np.random.Generator) -> dict[str, ObservableResult]:
 def make_marginals(case: CaseRecord, rng: np.random.Generator, n: int = 8) -> dict[str, Marginal]:
     """Histograms with mass beyond their ends."""
     marginals = {}
-    for name, unit, lower, upper in zip(
-        case.system.state, case.system.units, (-2.0, 0.0), (3.0, 6.0), strict=True
-    ):
+    for name, unit, lower, upper in zip(case.system.state, case.system.units, (-2.0, 0.0), (3.0, 6.0), strict=True):
         mass = rng.dirichlet(np.ones(n + 2))
         edges = np.linspace(lower, upper, n + 1)
-        marginals[name] = Marginal(
-            edges, mass[1:-1], 0.01 * mass[1:-1], float(mass[0]), float(mass[-1]), unit
-        )
+        marginals[name] = Marginal(edges, mass[1:-1], 0.01 * mass[1:-1], float(mass[0]), float(mass[-1]), unit)
     return marginals
 
 
@@ -142,9 +138,7 @@ def make_tally(n_cell: int, rng: np.random.Generator, n_replicate: int = 4) -> T
     """Two to five entries a row, among them the outside state."""
     sizes = rng.integers(2, 6, n_cell)
     pointer = np.concatenate([[0], np.cumsum(sizes)]).astype(np.int64)
-    column = np.concatenate([np.sort(rng.choice(n_cell + 2, n, replace=False)) for n in sizes]).astype(
-        np.int32
-    )
+    column = np.concatenate([np.sort(rng.choice(n_cell + 2, n, replace=False)) for n in sizes]).astype(np.int32)
     count = rng.integers(0, 17, (len(column), n_replicate)).astype(np.uint16)
     return Tally(pointer, column, count, np.add.reduceat(count, pointer[:-1], axis=0).astype(np.int64))
 

@@ -90,6 +90,8 @@ SPECS = {
     "ornstein": KernelSpec(
         "weak2", ("x",), ("theta", "sigma"), ("-v_theta*v_x",), noise=((("v_sigma", frozenset({"sigma"})),),)
     ),
+    # a hand that goes round at unit speed
+    "clock": KernelSpec("rk4", ("a",), (), ("1.0",), periodic=(("a", 0.0, 2.0 * np.pi),)),
     "noisy-pair": KernelSpec("weak2", ("x", "y"), (), linear_rows(DRIFT), noise=coefficients(KICK_1, KICK_2)),
 }
 
@@ -108,11 +110,24 @@ def kernel(name: str) -> Callable[..., int]:
     return burst_kernel(SPECS[name])
 
 
+def parameter_array(name: str, parameters: Sequence[float], centres: Sequence[float] | None = None) -> np.ndarray:
+    """Parameters of a kernel of `SPECS`, then the centres of its observables (0 if None); at least one number.
+
+    Parameters that the kernel does not have are left off. Compiled kernels do not notice an array that is too short.
+    """
+    spec = SPECS[name]
+    middle = [0.0] * len(spec.observables) if centres is None else list(centres)
+    own = list(parameters)[: len(spec.parameters)]
+    assert (len(own), len(middle)) == (len(spec.parameters), len(spec.observables)), "one number each is needed"
+    return np.array([*own, *middle] or [0.0], dtype=float)
+
+
 def fly(
     name: str,
     state: Any,
     *,
     parameters: Sequence[float] = (0.0,),
+    centres: Sequence[float] | None = None,
     step: float = 1.0,
     n_step: int = 1,
     stream: np.ndarray | None = None,
@@ -121,8 +136,9 @@ def fly(
 ) -> Flown:
     """Fly a kernel of `SPECS` from state (n_dim, n).
 
-    `axis` holds lower ends, upper ends and the number of intervals of the marginals, which are tallied every
-    `stride` steps; None for no marginals.
+    `centres` holds a number per observable, taken off it before summing; None for zeros. `axis` holds lower ends,
+    upper ends and the number of intervals of the marginals, which are tallied every `stride` steps; None for no
+    marginals.
     """
     out = np.array(state, dtype=float, order="C", ndmin=2)
     n_dim, n = out.shape
@@ -136,7 +152,7 @@ def fly(
         sums,
         slots,
         words,
-        np.array([*list(parameters)[: len(SPECS[name].parameters)], *[0.0] * len(SPECS[name].observables)] or [0.0]),
+        parameter_array(name, parameters, centres),
         float(step),
         n_step,
         stride,

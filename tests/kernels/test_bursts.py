@@ -33,8 +33,11 @@ def spiral_path(start: np.ndarray, step: float, n_step: int) -> np.ndarray:
 
 
 def event_sums(inside: np.ndarray) -> np.ndarray:
-    """Steps inside and entries, shape (2, n), from recorded membership (n_step + 1, n) that begins at the start."""
-    return np.array([inside[1:].sum(axis=0), (inside[1:] & ~inside[:-1]).sum(axis=0)], dtype=float)
+    """Steps inside and entries, shape (2, n), from recorded membership (n_step + 1, n) that begins at the start.
+
+    From the second step on: neither the first step nor an entry at it counts.
+    """
+    return np.array([inside[2:].sum(axis=0), (inside[2:] & ~inside[1:-1]).sum(axis=0)], dtype=float)
 
 
 @pytest.mark.parametrize("n", [1, 5, 63, 64, 65, 200])
@@ -65,7 +68,7 @@ def test_sums_of_a_flow_agree_with_recorded_paths() -> None:
     np.testing.assert_array_equal(flown.sums[0:2], event_sums(x > 0.2))
     np.testing.assert_array_equal(flown.sums[2:4], event_sums(x**2 + y**2 < 0.3))
     assert flown.sums[1].max() >= 2.0, "starts must give several entries"
-    expected = [x[1:].sum(0), (x[1:] ** 2).sum(0), (x * y)[1:].sum(0), ((x * y)[1:] ** 2).sum(0)]
+    expected = [x[2:].sum(0), (x[2:] ** 2).sum(0), (x * y)[2:].sum(0), ((x * y)[2:] ** 2).sum(0)]
     np.testing.assert_allclose(flown.sums[4:], expected, rtol=0.0, atol=1e-12)
 
 
@@ -74,6 +77,37 @@ def test_an_entry_needs_a_start_outside() -> None:
     flown = fly("logistic", [0.95, 0.05, 0.4], parameters=[1.0], n_step=1)
     # 0.95 leaves to 0.0475; 0.05 stays out; 0.4 moves to 0.24 within the second event
     np.testing.assert_array_equal(flown.sums[:4], [[0, 0, 0], [0, 0, 0], [0, 0, 1], [0, 0, 0]])
+
+
+def test_an_entry_from_the_start_counts_in_bursts_of_one_step_only() -> None:
+    """Second event, 0.2 < x < 0.5, of x -> 3.9 x (1 - x), and the first, x > 0.9.
+
+    0.1 goes to 0.351 (an entry) and 0.888; 0.351 to 0.888 and 0.387 (an entry); 0.888 to 0.388 (an entry) and 0.926.
+    """
+    start = [0.1, 0.351, 0.888]
+    one = fly("logistic", start, parameters=[3.9], n_step=1)
+    np.testing.assert_array_equal(one.sums[:4], [[0, 0, 0], [0, 0, 0], [1, 0, 1], [1, 0, 1]])
+    two = fly("logistic", start, parameters=[3.9], n_step=2)
+    np.testing.assert_array_equal(two.sums[:4], [[0, 0, 1], [0, 0, 1], [0, 1, 0], [0, 1, 0]])
+    np.testing.assert_array_equal(one.sums[4], one.state[0])
+    np.testing.assert_array_equal(two.sums[4], two.state[0])
+
+
+def test_centres_keep_the_digits_of_a_variance() -> None:
+    """Observables x and x y of states at rest near (1e9, 1), a centre each; without centres no digit is left."""
+    x = 1e9 + np.random.default_rng(5).standard_normal(4096)
+    state = np.array([x, np.full_like(x, 2.0)])
+    rest: dict[str, Any] = {"parameters": [0.0, 0.0, 0.0], "n_step": 5}
+    sums = fly("spiral", state, centres=[1e9, -7.0], **rest).sums[4:]
+    expected = [x - 1e9, (x - 1e9) ** 2, 2.0 * x + 7.0, (2.0 * x + 7.0) ** 2]
+    np.testing.assert_allclose(sums, 4.0 * np.array(expected), rtol=1e-14)
+
+    def variance(found: np.ndarray) -> float:
+        mean, square = found.mean(axis=1) / 4.0
+        return float(square - mean**2)
+
+    assert variance(sums[:2]) == pytest.approx(np.var(x), rel=1e-10)
+    assert abs(variance(fly("spiral", state, **rest).sums[4:6]) - np.var(x)) > 0.1
 
 
 def test_sums_of_a_map_agree_with_recorded_paths() -> None:
@@ -85,8 +119,8 @@ def test_sums_of_a_map_agree_with_recorded_paths() -> None:
     p = np.array(path)
     np.testing.assert_array_equal(flown.sums[0:2], event_sums(p > 0.9))
     np.testing.assert_array_equal(flown.sums[2:4], event_sums((p > 0.2) & (p < 0.5)))
-    np.testing.assert_allclose(flown.sums[4], p[1:].sum(axis=0), atol=1e-8)
-    np.testing.assert_allclose(flown.sums[6], np.log(p[1:]).sum(axis=0), atol=1e-6)
+    np.testing.assert_allclose(flown.sums[4], p[2:].sum(axis=0), atol=1e-8)
+    np.testing.assert_allclose(flown.sums[6], np.log(p[2:]).sum(axis=0), atol=1e-6)
 
 
 def test_blow_up_marks_nan_and_leaves_no_sums() -> None:
@@ -164,8 +198,9 @@ def test_runge_kutta_has_order_four() -> None:
 
 
 def test_sums_notice_a_shift_by_one_step() -> None:
-    """Negative control of the brute force: counting the start instead of the end gives other sums."""
+    """Negative control of the brute force: the first step instead of the last, or as well, gives other sums."""
     start = spiral_starts(333)
     flown = fly("spiral", start, parameters=SPIRAL, step=0.05, n_step=100)
     path = spiral_path(start, 0.05, 100)
-    assert np.any(flown.sums[0] != (path[:-1, 0] > 0.2).sum(axis=0))
+    for counted in (path[1:-1], path[1:]):
+        assert np.any(flown.sums[0] != (counted[:, 0] > 0.2).sum(axis=0))

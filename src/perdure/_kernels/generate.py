@@ -158,7 +158,7 @@ def lane_body(
     at = 2 * len(spec.events)
     for k, source in enumerate(spec.observables):
         lines += [
-            f"value = keep * ({source} - centre_{k})",
+            f"value = ({source} - centre_{k}) if keep > 0.0 else 0.0",
             f"{sums[at + 2 * k]} += value",
             f"{sums[at + 2 * k + 1]} += value * value",
         ]

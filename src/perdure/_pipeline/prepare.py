@@ -107,8 +107,7 @@ def centres_of(case: CaseRecord, flight: Flight, pilot: Pilot) -> Floats:
     first = 2 * len(case.events)
     points = pilot.points[:, :: max(1, pilot.points.shape[1] // 4096)]
     seen = flight.flown(points, pilot.step, 1)[1][first::2]
-    centre = np.median(seen, axis=1) if len(seen) else np.zeros(0)
-    return np.where(np.isfinite(centre), centre, 0.0)
+    return np.array([float(np.median(row[np.isfinite(row)])) if np.isfinite(row).any() else 0.0 for row in seen])
 
 
 def visited_cells(case: CaseRecord, cells: Boxes, pilot: Pilot, flight: Flight) -> Visited:

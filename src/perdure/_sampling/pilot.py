@@ -178,8 +178,8 @@ def pace(flight: Flight, system: System, state: Floats, bursts: BurstOptions) ->
         moved = np.where(np.isfinite(moved), moved, np.inf)
         if np.any(np.quantile(moved, 0.75, axis=1) > most * spread):
             step *= 2.0 ** -(halvings + 1)
-            break
-    return max(rate, 0.05 / step), step
+            return max(rate, 0.05 / step), step
+    return rate, step
 
 
 def survey(flight: Flight, system: System, cells: CellOptions, bursts: BurstOptions) -> Pilot:
@@ -206,20 +206,14 @@ def survey(flight: Flight, system: System, cells: CellOptions, bursts: BurstOpti
         state = long_flight(flight, system, state, step, 20_000 if system.is_flow else 2000)[:, :N_LANE]
     if system.is_flow and state.shape[1] >= 2:
         rate, step = pace(flight, system, state, bursts)
-    n_kept = state.shape[1]
-    if n_kept < 2:
-        raise NoAttractorError(
-            f"[system] equations: {N_START - n_kept} of {N_START} pilot trajectories from dispersed starts left all "
-            "bounds or became non-finite (a number too large, 0/0, or log or sqrt of a negative number); allowed: a "
-            "system with a bounded long run; check the equations and parameters, or give [cells] lower and upper so "
-            "that the starts lie in the basin"
-        )
+    require_two(state.shape[1])
     records = recorded(flight, system, state, step)
     for _ in range(6):
-        if not shrinking(records):
+        if records.shape[2] < 2 or not shrinking(records):
             break
         state = long_flight(flight, system, records[-1], step, 100_000 if system.is_flow else 10_000)
         records = recorded(flight, system, state, step)
+    require_two(records.shape[2])
     settled = ~travelling(records)
     records = records[:, :, settled] if settled.sum() >= 2 else records
     n_kept = records.shape[2]
@@ -227,6 +221,17 @@ def survey(flight: Flight, system: System, cells: CellOptions, bursts: BurstOpti
     own = np.ptp(records, axis=0).max(axis=1)
     at_rest = bool(np.all(own <= 1e-3 * np.ptp(points, axis=1)))
     return Pilot(points, records[-1], rate, step, N_START, n_kept, at_rest)
+
+
+def require_two(n_kept: int) -> None:
+    """Refuse to go on with fewer than two trajectories."""
+    if n_kept < 2:
+        raise NoAttractorError(
+            f"[system] equations: {N_START - n_kept} of {N_START} pilot trajectories from dispersed starts left all "
+            "bounds or became non-finite (a number too large, 0/0, or log or sqrt of a negative number); allowed: a "
+            "system with a bounded long run; check the equations and parameters, or give [cells] lower and upper so "
+            "that the starts lie in the basin"
+        )
 
 
 def shrinking(records: Floats) -> bool:

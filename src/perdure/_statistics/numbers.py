@@ -180,7 +180,7 @@ def event_result(
     seen = f"in {averages.effective:.3g} effective bursts"
     if share == 0.0:
         quantity = Quantity(None, 0.0, bound, {}, "1", f"never seen {seen}: upper bound")
-    elif entries == 0.0 and share > 1.0 - 1e-12:
+    elif share > 1.0 - 1e-12:
         quantity = Quantity(1.0, 1.0 - bound, 1.0, {"sampling": 0.0}, "1", f"always seen {seen}: lower bound")
     else:
         quantity = interval(share, *at["share", k], "1", "share", averages.cells(lambda v: v[2 * k]))
@@ -217,7 +217,7 @@ def counted(error: float, value: float, hits: float) -> float:
 
     With all of a few entries in one replicate the first-order error of a ratio cancels to nothing.
     """
-    return max(error, value / np.sqrt(hits)) if 0.0 < hits < 100.0 else error
+    return float(max(error, value / np.sqrt(hits))) if 0.0 < hits < 100.0 else error
 
 
 def why_no_rate(case: CaseRecord, k: int) -> str:

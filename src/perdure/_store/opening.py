@@ -58,8 +58,8 @@ def check_root(root: Mapping[str, Any], label: str) -> None:
     if root.get("format") != FORMAT:
         found = f"its attribute format is {root['format']!r}" if "format" in root else "it has no attribute format"
         raise DensityFileError(
-            f"{label}: found an HDF5 file that perdure did not write ({found}); allowed: a file whose attribute 'format' is "
-            f"{FORMAT!r}; check the path"
+            f"{label}: found an HDF5 file that perdure did not write ({found}); allowed: a file whose attribute "
+            f"'format' is {FORMAT!r}; check the path"
         )
     version = root.get("format_version")
     if not isinstance(version, int) or version < 1:

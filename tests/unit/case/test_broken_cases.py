@@ -30,9 +30,7 @@ def keyed(line: str) -> str:
 
 def named(name: str) -> str:
     """A case with a state component of this name."""
-    return (
-        f'[system]\nkind = "flow"\nstate = ["x", "{name}"]\n[system.equations]\nx = "-x"\n"{name}" = "-x"\n'
-    )
+    return f'[system]\nkind = "flow"\nstate = ["x", "{name}"]\n[system.equations]\nx = "-x"\n"{name}" = "-x"\n'
 
 
 # Text of the file, line, key, and parts of what must be said after it.

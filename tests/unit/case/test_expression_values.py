@@ -66,9 +66,7 @@ def _binary(symbol: str, left: Sample, right: Sample) -> Sample:
         "%": np.mod,
     }
     function = functions[symbol]
-    return Sample(
-        f"(({left.text}) {symbol} ({right.text}))", lambda v: function(left.compute(v), right.compute(v))
-    )
+    return Sample(f"(({left.text}) {symbol} ({right.text}))", lambda v: function(left.compute(v), right.compute(v)))
 
 
 def _power(base: Sample, exponent: float) -> Sample:
@@ -127,9 +125,7 @@ def _not(condition: Sample) -> Sample:
     return Sample(f"(not ({condition.text}))", lambda v: np.logical_not(condition.compute(v)))
 
 
-ONE_ARGUMENT = [
-    name[2:] for name in KERNEL if name not in {"f_atan2", "f_max2", "f_min2", "f_mod", "f_not", "f_pow"}
-]
+ONE_ARGUMENT = [name[2:] for name in KERNEL if name not in {"f_atan2", "f_max2", "f_min2", "f_mod", "f_not", "f_pow"}]
 KINDS = ["name", "literal", "binary", "call", "power", "minus", "choice"]
 LITERALS = st.integers(0, 10**6) | st.floats(0, 1e9, allow_nan=False)
 EXPONENTS = st.integers(-64, 64) | st.sampled_from([0.5, 1.5, -2.25, 3.0])
@@ -176,9 +172,7 @@ def conditions(draw: st.DrawFn, depth: int = 3) -> Sample:
     return _chain(draw(side), draw(st.lists(link, min_size=1, max_size=3)))
 
 
-points = st.fixed_dictionaries(
-    {name: st.floats(-1e3, 1e3) | st.sampled_from([0.0, 1.0, -1.0, 0.5]) for name in NAMES}
-)
+points = st.fixed_dictionaries({name: st.floats(-1e3, 1e3) | st.sampled_from([0.0, 1.0, -1.0, 0.5]) for name in NAMES})
 
 
 class _AsInKernel(ast.NodeTransformer):

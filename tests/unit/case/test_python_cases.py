@@ -135,9 +135,7 @@ def test_with_parameters_changes_these_and_nothing_else(tmp_path: Path) -> None:
 
 def test_with_parameters_keeps_file_name_title_and_seed_of_a_file_case(tmp_path: Path) -> None:
     path = tmp_path / "loop.toml"
-    path.write_text(
-        "\ufeff# note\n" + Case(system=FLOW).text.replace('title = "untitled"\n', ""), encoding="utf-8"
-    )
+    path.write_text("\ufeff# note\n" + Case(system=FLOW).text.replace('title = "untitled"\n', ""), encoding="utf-8")
     other = load_case(path, seed=9).with_parameters(rho=20)
     assert (other.title, other.seed, other.source_name) == ("loop", 9, "loop.toml")
     assert tomllib.loads(other.text)["system"]["parameters"]["rho"]["value"] == 20
@@ -147,8 +145,7 @@ def test_with_parameters_names_the_nearest() -> None:
     with pytest.raises(CaseError) as caught:
         Case(system=FLOW).with_parameters(sgma=11.0, qq=3)
     assert caught.value.problems == (
-        "<python>, with_parameters: found the unknown parameter 'sgma'; allowed: sigma, rho; did you mean "
-        "'sigma'?",
+        "<python>, with_parameters: found the unknown parameter 'sgma'; allowed: sigma, rho; did you mean 'sigma'?",
         "<python>, with_parameters: found the unknown parameter 'qq'; allowed: sigma, rho; correct the name",
     )
 
@@ -193,9 +190,7 @@ def test_with_parameters_keeps_the_functions() -> None:
     other = Case(system=system).with_parameters(k=3)
     assert (other.system.function, other.system.noise_function) == (pendulum, pendulum_noise)
     assert other.system.parameters["k"].value == 3.0
-    assert other.text.splitlines()[1].startswith(
-        f"# noise: Python function {__name__}.pendulum_noise (SHA-256"
-    )
+    assert other.text.splitlines()[1].startswith(f"# noise: Python function {__name__}.pendulum_noise (SHA-256")
 
 
 def test_a_function_without_source_is_named() -> None:
@@ -208,9 +203,7 @@ def test_a_function_without_source_is_named() -> None:
 def test_no_case_file_can_name_a_function(tmp_path: Path) -> None:
     path = tmp_path / "a.toml"
     for key in ("function", "noise_function"):
-        path.write_text(
-            f'[system]\nkind = "map"\nstate = ["x"]\n{key} = "os.getpid"\n[system.equations]\nx = "x"\n'
-        )
+        path.write_text(f'[system]\nkind = "map"\nstate = ["x"]\n{key} = "os.getpid"\n[system.equations]\nx = "x"\n')
         with pytest.raises(CaseError, match=f"line 4, \\[system\\] {key}: found the unknown key"):
             load_case(path)
 

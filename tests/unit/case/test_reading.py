@@ -51,9 +51,7 @@ def test_what_is_no_case_file_is_refused(tmp_path: Path, content: bytes, message
 
 
 def test_missing_file(tmp_path: Path) -> None:
-    with pytest.raises(
-        CaseError, match=r"^b\.toml: found no such file \(.*\); allowed: an existing case file"
-    ):
+    with pytest.raises(CaseError, match=r"^b\.toml: found no such file \(.*\); allowed: an existing case file"):
         load_case(tmp_path / "b.toml")
 
 
@@ -65,9 +63,7 @@ def test_folder(tmp_path: Path) -> None:
 def test_a_file_as_a_folder_and_a_nul_in_the_path(tmp_path: Path) -> None:
     (tmp_path / "a").write_text("")
     for path in (str(tmp_path / "a" / "b.toml"), "a\0b"):
-        with pytest.raises(
-            CaseError, match=r"found a file that cannot be read \(.*\); allowed: a readable file"
-        ):
+        with pytest.raises(CaseError, match=r"found a file that cannot be read \(.*\); allowed: a readable file"):
             load_case(path)
 
 
@@ -93,9 +89,7 @@ def test_control_characters_of_a_file_name_do_not_reach_title_and_messages(tmp_p
 def test_seed_argument_is_checked(tmp_path: Path, seed: int) -> None:
     path = tmp_path / "a.toml"
     path.write_text(MAP)
-    with pytest.raises(
-        UsageError, match=r"load_case, seed: found .*; allowed: a whole number from 0 to 2\*\*128"
-    ):
+    with pytest.raises(UsageError, match=r"load_case, seed: found .*; allowed: a whole number from 0 to 2\*\*128"):
         load_case(path, seed=seed)
 
 

@@ -20,9 +20,7 @@ def make_density(*, inside: float = 1.0, marginals: dict[str, Marginal] | None =
     """Invented: 3 components, the second periodic, half of the lattice in use."""
     rng = np.random.default_rng(11)
     counts = np.array(COUNTS)
-    grid = BoxGrid(
-        np.array([-1.0, 0.0, 10.0]), np.array([0.5, 1.25, 0.1]), counts, np.array([False, True, False])
-    )
+    grid = BoxGrid(np.array([-1.0, 0.0, 10.0]), np.array([0.5, 1.25, 0.1]), counts, np.array([False, True, False]))
     keys = np.sort(rng.choice(counts.prod(), 60, replace=False))
     mass = inside * rng.dirichlet(np.ones(60))
     mass[7] += mass[8]
@@ -135,9 +133,7 @@ def test_cell_marginal_is_the_sum_over_the_other_axes() -> None:
     np.testing.assert_array_equal(grid.todense(), dense(density))
     for axis, name in enumerate(density.state):
         others = tuple({0, 1, 2} - {axis})
-        np.testing.assert_allclose(
-            density.cell_marginal(name), grid.sum(axis=others).todense(), rtol=1e-14, atol=1e-17
-        )
+        np.testing.assert_allclose(density.cell_marginal(name), grid.sum(axis=others).todense(), rtol=1e-14, atol=1e-17)
         assert density.cell_marginal(name).shape == (COUNTS[axis],)
 
 
@@ -245,16 +241,12 @@ def test_to_xarray() -> None:
     assert array["z"].attrs["units"] == "m/s"
     np.testing.assert_array_equal(array.data.todense(), dense(density))
     np.testing.assert_allclose(array["x"], density.edges("x")[:-1] + 0.25, rtol=1e-14)
-    np.testing.assert_allclose(
-        array.sum(("x", "z")).data.todense(), density.cell_marginal("theta"), rtol=1e-13
-    )
+    np.testing.assert_allclose(array.sum(("x", "z")).data.todense(), density.cell_marginal("theta"), rtol=1e-13)
 
 
 def test_to_xarray_without_xarray(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setitem(sys.modules, "xarray", None)
-    with pytest.raises(
-        UsageError, match=r"the package xarray cannot be imported .* install it or use `grid`"
-    ):
+    with pytest.raises(UsageError, match=r"the package xarray cannot be imported .* install it or use `grid`"):
         make_density().to_xarray()
 
 

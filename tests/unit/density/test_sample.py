@@ -29,9 +29,7 @@ def z_scores(points: np.ndarray, density: Density) -> np.ndarray:
     apart = points - mean
     columns = [apart[:, 0], apart[:, 1], apart[:, 0] ** 2, apart[:, 1] ** 2, apart[:, 0] * apart[:, 1]]
     exact = [0.0, 0.0, cov[0, 0], cov[1, 1], cov[0, 1]]
-    return np.array(
-        [(c.mean() - e) / (c.std() / np.sqrt(len(c))) for c, e in zip(columns, exact, strict=True)]
-    )
+    return np.array([(c.mean() - e) / (c.std() / np.sqrt(len(c))) for c, e in zip(columns, exact, strict=True)])
 
 
 def counts_per_cell(points: np.ndarray, density: Density) -> np.ndarray:

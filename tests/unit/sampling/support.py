@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from kernels.support import SPECS, kernel
+from kernels.support import SPECS, kernel, parameter_array
 from perdure._partition import Boxes
 from perdure._records import BoxGrid, Plan, System
 from perdure._sampling import BurstSampler, Flight, sobol_base
@@ -24,7 +24,7 @@ def system_of(name: str) -> System:
 
 
 def flight_of(name: str, parameters: Sequence[float] = (0.0,), seed: int = 1) -> Flight:
-    return Flight(kernel(name), np.array(parameters, dtype=float), SPECS[name].n_sum, generator(seed, "pilot"))
+    return Flight(kernel(name), parameter_array(name, parameters), SPECS[name].n_sum, generator(seed, "pilot"))
 
 
 def plan_of(grid: BoxGrid, **changes: Any) -> Plan:
@@ -57,5 +57,5 @@ def cells_of(plan: Plan, seed: int = 3) -> Boxes:
 
 
 def sampler_of(name: str, parameters: Sequence[float], plan: Plan, n_interval: int = 10) -> BurstSampler:
-    values = np.array(parameters, dtype=float)
+    values = parameter_array(name, parameters)
     return BurstSampler(kernel(name), cells_of(plan), plan, values, SPECS[name].n_sum, n_interval)

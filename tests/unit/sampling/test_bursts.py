@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
+from typing import Any
 
 import numpy as np
 import pytest
@@ -14,7 +15,7 @@ from kernels.support import fly
 from perdure._kernels.rows import BLOWN, OUTSIDE
 from perdure._records import BoxGrid, Exits
 from perdure._sampling import BlockRows, bursts, outside_row
-from perdure._sampling.outside import added, pooled
+from perdure._sampling.outside import DROPPED, KEPT, added, has_settled, pooled
 from perdure._streams import generator
 from unit.sampling.support import cells_of, plan_of, sampler_of
 
@@ -174,3 +175,47 @@ def test_particles_outside_take_the_law_of_the_long_run() -> None:
         assert_agrees(stay.mean(), staying_outside(0.7), error, allowance=1e-3)
     assert found.settled
     assert found.row.count.sum() == found.n_burst
+
+
+def stays(early: float, late: float) -> list[float]:
+    return [early] * 8 + [late] * 8
+
+
+def test_settling_is_told_from_the_two_halves() -> None:
+    """Five standard errors and one percent of those that come back; an error of 8 sweeps of 1000 is 0.008."""
+    error = np.sqrt(0.25 * 2.0 / 8000.0)
+    assert has_settled(stays(0.5, 0.5), 1000)
+    assert has_settled(stays(0.5 - 4.9 * error, 0.5), 1000)
+    assert not has_settled(stays(0.5 - 5.1 * error - 0.005, 0.5), 1000)
+    assert not has_settled(stays(0.4, 0.5), 1000)
+    assert has_settled(stays(0.4, 0.5), 20), "few particles cannot tell"
+    # of rare returns a part counts: 0.004 of 1 would pass beside half of them, not beside 0.001
+    assert not has_settled(stays(0.995, 0.999), 10**6)
+
+
+def test_long_excursions_need_more_sweeps(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Slow returns: more sweeps than the first ones are flown; particles that are soon back need no more."""
+    grid = BoxGrid(np.array([-1.0]), np.array([0.02]), np.array([100]), np.array([False]))
+    made = plan_of(grid, step=0.05, n_step=1, per_cell=64, n_replicate=8, scheme="weak2")
+
+    def sweeps(theta: float, sigma: float) -> tuple[int, bool]:
+        """Sweeps flown, and whether the particles settled."""
+        sampler = sampler_of("ornstein", [theta, sigma], made)
+        exits = Exits(*sampler.exits(made.seed_keys, made.seed_keys))
+        flown, fly_once = [], sampler.fly
+
+        def noted(*given: Any) -> BlockRows:
+            flown.append(given[-1])
+            return fly_once(*given)
+
+        monkeypatch.setattr(sampler, "fly", noted)
+        weight = np.full(len(exits.cell), 0.01)
+        found = outside_row(sampler, exits, made.seed_keys, weight, generator(4, "outside"))
+        assert flown == list(range(1, len(flown) + 1))
+        assert found.n_burst == 8192 * min(KEPT, len(flown) - DROPPED) or not found.settled
+        return len(flown), found.settled
+
+    assert sweeps(20.0, 9.0) == (DROPPED + KEPT, True)
+    slow, settled = sweeps(0.05, 0.3)
+    assert slow > 2 * KEPT + DROPPED
+    assert settled

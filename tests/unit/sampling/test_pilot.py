@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -17,6 +18,8 @@ from perdure._sampling.pilot import (
     NOISY_FACTOR,
     burst_length,
     local_rate,
+    pace,
+    shrinking,
     time_step,
 )
 from perdure.errors import NoAttractorError
@@ -78,7 +81,8 @@ def test_no_attractor() -> None:
     with pytest.raises(NoAttractorError) as caught:
         surveyed("logistic", 5.0)
     message = str(caught.value)
-    assert re.search(r"\d+ of 8192 pilot trajectories .* became non-finite; allowed: .*; check the equations", message)
+    assert re.search(r"\d+ of 8192 pilot trajectories .* became non-finite \(.*\); allowed: .*; check the", message)
+    assert "(a number too large, 0/0, or log or sqrt of a negative number)" in message
     assert "[cells] lower and upper" in message
 
 
@@ -102,6 +106,40 @@ def test_local_rate_of_a_linear_flow(a: float, w: float) -> None:
     """Differences change at the rate sqrt(a^2 + w^2); a finite difference over at most 5 percent of change."""
     found = local_rate(flight_of("spiral", [a, w, 0.0]), circle(1.0).points)
     assert found == pytest.approx(np.hypot(a, w), rel=0.05)
+
+
+def test_pace_of_a_flow_whose_differences_stay() -> None:
+    """Phases on a circle at unit speed: no local rate, yet a step moves them by at most a tenth of their spread."""
+    flight, system = flight_of("clock"), system_of("clock")
+    phase = np.random.default_rng(6).uniform(0.0, 2.0 * np.pi, (1, 4096))
+    assert local_rate(flight, phase) < 1e-6
+    rate, step = pace(flight, system, phase, BurstOptions())
+    assert 0.05 * phase.std() <= step <= 0.1 * phase.std() < 1.0
+    assert rate == pytest.approx(0.05 / step)
+    # a whole turn seems to be no move at all, so long steps cannot be told by how far they lead
+    assert np.quantile(np.abs(flight.fly(phase, 2.0 * np.pi, 1) - phase), 0.75) < 1e-12
+    _, step = pace(flight, replace(system, kind="noisy-flow"), phase, BurstOptions())
+    assert 0.25 * phase.std() <= step <= 0.5 * phase.std()
+
+
+def test_pace_keeps_to_the_local_rate_and_the_step_given() -> None:
+    """A slow spiral moves little in a twentieth of its time; a step that the case gives is not passed."""
+    flight, system, points = flight_of("spiral", [0.3, 0.4, 0.0]), system_of("spiral"), circle(1.0).points
+    rate, step = pace(flight, system, points, BurstOptions())
+    assert rate == pytest.approx(0.5, rel=0.05)
+    assert step == pytest.approx(0.05 / rate)
+    assert pace(flight, system, points, BurstOptions(step=0.01))[1] == 0.01
+
+
+def test_shrinking_ranges_are_noticed() -> None:
+    """One component that closes in is enough; a range that stays or grows is none."""
+    time = np.arange(200.0)[:, None]
+    turn = np.sin(time + np.arange(7.0))
+    still, falling, growing = turn, turn * np.exp(-time / 150.0), turn * np.exp(time / 150.0)
+    assert shrinking(np.stack([still, falling], axis=1))
+    assert not shrinking(np.stack([still, growing], axis=1))
+    assert not shrinking(np.stack([still, turn * np.exp(-time / 3000.0)], axis=1))
+    assert not shrinking(np.zeros((200, 2, 7)))
 
 
 @pytest.mark.parametrize(("noisy", "factor"), [(False, BURST_FACTOR), (True, NOISY_FACTOR)])

@@ -21,7 +21,7 @@ def pilot_of(points: np.ndarray, at_rest: bool = False) -> Pilot:
     [
         (64, 100, (64, 8)), (16, 100, (16, 8)), (8, 100, (8, 4)), (4, 100, (4, 2)), (2, 100, (2, 2)),
         (1, 100, (2, 2)), (3, 100, (4, 2)), (5, 100, (6, 2)), (7, 100, (8, 2)), (12, 100, (12, 4)),
-        (20, 100, (20, 4)), (63, 100, (64, 2)), (66, 100, (66, 2)), (64, 5000, (64, 2)), (33, 5000, (34, 2)),
+        (20, 100, (20, 4)), (63, 100, (64, 2)), (66, 100, (66, 2)), (64, 5000, (64, 4)), (33, 5000, (34, 2)),
     ],
 )  # fmt: skip
 def test_given_bursts_per_cell(given: int, n_cell: int, expected: tuple[int, int]) -> None:
@@ -40,7 +40,7 @@ def test_found_bursts_per_cell(n_cell: int, n_step: int) -> None:
     assert planning.FEWEST <= per_cell <= planning.MOST
     assert per_cell & (per_cell - 1) == 0
     assert per_cell % n_replicate == 0
-    assert n_replicate == (2 if n_cell >= planning.MANY_CELLS else 8)
+    assert n_replicate == (4 if n_cell >= planning.MANY_CELLS else 8)
     if per_cell > planning.FEWEST:
         assert per_cell * n_cell <= planning.BURST_BUDGET
         assert per_cell * n_cell * n_step <= planning.STEP_BUDGET

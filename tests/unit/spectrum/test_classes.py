@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from perdure._records import Tally
-from perdure._spectrum import closed_classes, period_of
+from perdure._spectrum import closed_classes, parts_without, period_of
 from unit.transitions.support import tally_of
 
 OUT, BLOWN = -2, -1
@@ -107,6 +107,21 @@ def test_period_of_one_class_among_others() -> None:
     three, two = closed_classes(tally).members
     assert period_of(tally, two) == 2
     assert period_of(tally, three) == 1
+
+
+def test_groups_linked_through_one_cell() -> None:
+    """Two cycles joined at cell 2 fall apart without it, one of a cycle does into single cells; another link joins."""
+    bridge = [(0, 1), (1, 0), (1, 2), (2, 1), (2, 3), (3, 2), (3, 4), (4, 5), (5, 3)]
+    mass = np.array([0.1, 0.1, 0.05, 0.2, 0.2, 0.35])
+    tally = chain(6, bridge)
+    (cells,) = closed_classes(tally).members
+    np.testing.assert_allclose(parts_without(tally, cells, mass, 2), [0.75, 0.2])
+    np.testing.assert_allclose(parts_without(tally, cells, mass, 0), [0.9])
+    np.testing.assert_allclose(parts_without(tally, cells, mass, 5), [0.45, 0.2])
+    one_way = chain(6, [*bridge, (0, 5)])
+    np.testing.assert_allclose(parts_without(one_way, cells, mass, 2), [0.75, 0.2])
+    both_ways = chain(6, [*bridge, (0, 5), (4, 1)])
+    np.testing.assert_allclose(parts_without(both_ways, cells, mass, 2), [0.95])
 
 
 @pytest.mark.parametrize("seed", range(5))

@@ -133,6 +133,7 @@ def test_part_from_cell_size() -> None:
 def test_parts_add_in_quadrature() -> None:
     alone = interval(2.0, 0.03, 1e9, "1", "real")
     both = interval(2.0, 0.03, 1e9, "1", "real", 0.04)
-    assert alone.high is not None and both.high is not None
+    assert alone.high is not None
+    assert both.high is not None
     assert (both.high - 2.0) / (alone.high - 2.0) == pytest.approx(5.0 / 3.0)
     assert both.parts == {"sampling": 0.03, "cells": 0.04}

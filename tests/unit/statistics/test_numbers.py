@@ -12,6 +12,7 @@ from perdure import Case
 from perdure._records import EventResult, ObservableResult
 from perdure._spectrum import ClassSolver
 from perdure._statistics import regime_numbers
+from perdure._statistics.numbers import counted
 from perdure._transitions import TransitionMatrix
 from unit.transitions.support import tally_of
 
@@ -35,15 +36,26 @@ def case_of(kind: str = "flow", **more: Any) -> Case:
     return Case(title="invented", system=system, events=events, observables={"x": "x"})
 
 
-def numbers(case: Case, sums: np.ndarray) -> tuple[dict[str, EventResult], dict[str, ObservableResult]]:
-    """Numbers of a chain of two cells with mass 1/3 and 2/3; sums (2, 2, n_sum) over 4 bursts a replicate."""
+def numbers(
+    case: Case, sums: np.ndarray, *, times: int = 1, n_step: int = N_STEP, centre: float = 0.0, alone: bool = False
+) -> tuple[dict[str, EventResult], dict[str, ObservableResult]]:
+    """Numbers of a chain of two cells with mass 1/3 and 2/3; sums (2, 2, n_sum) over 4 bursts a replicate.
+
+    `times` repeats every burst; `n_step` and `centre` are those of the plan and of the observable. With `alone` the
+    regime is the first cell only: all bursts end there.
+    """
     counts = np.zeros((2, 4, 2), dtype=int)
-    counts[0, 1], counts[1, 0], counts[1, 1] = 4, 2, 2
-    transition = TransitionMatrix(tally_of(counts))
-    solver = ClassSolver(transition, np.arange(2))
-    np.testing.assert_allclose(solver.mass, [1 / 3, 2 / 3])
-    plan = SimpleNamespace(n_step=N_STEP, duration=TAU)
-    events, observables = regime_numbers(case, plan, transition, solver.mass, sums, solver.adjoint, NO_LADDER, np.zeros(9))  # type: ignore[arg-type]
+    if alone:
+        counts[:, 0] = 4
+    else:
+        counts[0, 1], counts[1, 0], counts[1, 1] = 4, 2, 2
+    transition = TransitionMatrix(tally_of(times * counts))
+    solver = ClassSolver(transition, np.arange(1 if alone else 2))
+    np.testing.assert_allclose(solver.mass, [1, 0] if alone else [1 / 3, 2 / 3])
+    plan: Any = SimpleNamespace(n_step=n_step, duration=TAU)
+    events, observables = regime_numbers(
+        case, plan, transition, solver.mass, times * sums, solver.adjoint, NO_LADDER, np.array([centre])
+    )
     return dict(events), dict(observables)
 
 
@@ -63,15 +75,18 @@ SUMS = sums_of(
 
 
 def test_values() -> None:
-    """Share 1/3 * 20/80 + 2/3 * 4/80 = 7/60; entries 1/3 * 8/8 + 2/3 * 4/8 = 2/3 a burst of 2.5 s."""
+    """Of 8 bursts a cell nine steps each are summed, and the ways between ten are a burst of 2.5 s.
+
+    Share 1/3 * 20/72 + 2/3 * 4/72 = 7/54; entries 10/9 * (1/3 * 8/8 + 2/3 * 4/8) = 20/27 a burst.
+    """
     events, observables = numbers(case_of(), SUMS)
     often = events["often"]
-    assert often.share.value == pytest.approx(7 / 60)
-    assert often.entry_rate.value == pytest.approx(2 / 3 / TAU)
-    assert often.return_period.value == pytest.approx(TAU * 1.5)
-    assert often.mean_spell.value == pytest.approx(7 / 60 * TAU * 1.5)
+    assert often.share.value == pytest.approx(7 / 54)
+    assert often.entry_rate.value == pytest.approx(20 / 27 / TAU)
+    assert often.return_period.value == pytest.approx(TAU * 27 / 20)
+    assert often.mean_spell.value == pytest.approx(7 / 54 * TAU * 27 / 20)
     assert (often.entry_rate.unit, often.return_period.unit, often.mean_spell.unit) == ("1/s", "s", "s")
-    mean, square = (120 / 80 + 2 * 40 / 80) / 3, (240 / 80 + 2 * 120 / 80) / 3
+    mean, square = (120 / 72 + 2 * 40 / 72) / 3, (240 / 72 + 2 * 120 / 72) / 3
     assert observables["x"].mean.value == pytest.approx(mean)
     assert observables["x"].variance.value == pytest.approx(square - mean**2)
     for quantity in (often.share, often.entry_rate, often.return_period, often.mean_spell, observables["x"].mean):
@@ -82,6 +97,21 @@ def test_values() -> None:
         assert quantity.low < quantity.value
 
 
+def test_bursts_of_one_step_are_summed_whole() -> None:
+    """Share 7/6 of the sums above would be no share, so they are a tenth: 1/3 * 2/8 + 2/3 * 0.4/8 = 7/60."""
+    events, _ = numbers(case_of(), 0.1 * SUMS, n_step=1)
+    assert events["often"].share.value == pytest.approx(7 / 60)
+    assert events["often"].entry_rate.value == pytest.approx(2 / 30 / TAU)
+
+
+def test_centres_move_the_mean_alone() -> None:
+    """What was taken off an observable is added to its mean; variance and errors are those about the centre."""
+    plain, moved = (numbers(case_of(), SUMS, centre=c)[1]["x"] for c in (0.0, 1e3))
+    assert moved.mean.value == pytest.approx(1e3 + plain.mean.value, rel=1e-14)  # type: ignore[operator]
+    assert moved.mean.error == pytest.approx(plain.mean.error)
+    assert moved.variance == plain.variance
+
+
 def test_errors_of_derived_numbers() -> None:
     """Return period and rate have one relative error; shares and entries that scatter together cancel in the spell."""
     events, _ = numbers(case_of(), SUMS)
@@ -90,9 +120,30 @@ def test_errors_of_derived_numbers() -> None:
     assert relative[0] == pytest.approx(relative[1])
     together = SUMS.copy()
     together[:, :, 0] = 3.0 * together[:, :, 1]
-    spell = numbers(case_of(), together)[0]["often"].mean_spell
+    spell = numbers(case_of(), together, times=25)[0]["often"].mean_spell
     assert spell.value == pytest.approx(3.0 * TAU / N_STEP)
     assert spell.error == pytest.approx(0.0, abs=1e-12)
+
+
+def test_few_entries_bound_the_error_from_below() -> None:
+    """Of 8 entries none is sure to better than 1/sqrt(8), were replicates alike; of 104, replicates alone decide."""
+    alike = SUMS.copy()
+    alike[:, :, :2] = alike[:, :, :2].mean(axis=1, keepdims=True)
+    alike[:, :, 0] = 3.0 * alike[:, :, 1]
+    for times, relative in ((1, 12**-0.5), (8, 96**-0.5), (9, 0.0)):
+        often = numbers(case_of(), alike, times=times)[0]["often"]
+        assert often.mean_spell.error == pytest.approx(relative * often.mean_spell.value, abs=1e-12)  # type: ignore[operator]
+    scattered = numbers(case_of(), SUMS)[0]["often"].entry_rate
+    assert scattered.error >= 12**-0.5 * scattered.value  # type: ignore[operator]
+
+
+@pytest.mark.parametrize(
+    ("error", "hits", "expected"),
+    [(0.1, 4.0, 1.0), (1.5, 4.0, 1.5), (0.1, 99.0, 2.0 / 99.0**0.5), (0.1, 100.0, 0.1), (0.1, 0.0, 0.1)],
+)
+def test_counted(error: float, hits: float, expected: float) -> None:
+    """A value of 2: half of it is the error of four entries."""
+    assert counted(error, 2.0, hits) == pytest.approx(expected)
 
 
 def test_event_never_seen() -> None:
@@ -108,20 +159,41 @@ def test_event_never_seen() -> None:
 
 
 def test_always_inside_without_entry() -> None:
-    """A share of 1 has no entry to count."""
+    """A share of 1, all nine steps of 4 bursts, has no entry to count, and a lower bound from the bursts that count."""
     sums = SUMS.copy()
-    sums[:, :, 0], sums[:, :, 1] = 40.0, 0.0
+    sums[:, :, 0], sums[:, :, 1] = 36.0, 0.0
     often = numbers(case_of(), sums)[0]["often"]
     assert often.share.value == pytest.approx(1.0)
+    assert often.share.low == pytest.approx(0.05 ** (1.0 / 14.4))
+    assert often.share.high == 1.0
+    assert "always seen in 14.4 effective bursts" in often.share.reason
     assert often.entry_rate.value is None
     assert "no entry seen" in often.mean_spell.reason
+    sums[0, 0, 0] = 35.0
+    missed = numbers(case_of(), sums)[0]["often"].share
+    assert missed.value == pytest.approx(1.0 - 1 / 3 / 72)
+    assert not missed.reason
+    assert missed.high is not None
+    assert 1.0 - 1 / 3 / 72 < missed.high < 1.0
+
+
+def test_a_single_cell_at_rest_has_no_entry_rate() -> None:
+    """Entries there are seeds that settle; noise makes true ones, and two cells may be a cycle."""
+    lone = numbers(case_of(), SUMS, alone=True)[0]["often"]
+    assert lone.share.value == pytest.approx(20 / 72)
+    for quantity in (lone.entry_rate, lone.return_period, lone.mean_spell):
+        assert (quantity.value, quantity.low, quantity.high) == (None, None, None)
+        assert "single cell" in quantity.reason
+    noisy = numbers(case_of("noisy-flow"), SUMS, alone=True)[0]["often"]
+    assert noisy.entry_rate.value == pytest.approx(10 / 9 / TAU)
+    assert numbers(case_of(), SUMS)[0]["often"].entry_rate.value is not None
 
 
 def test_noisy_components_have_no_entry_rate() -> None:
     """A plain region of a component that white noise drives; one of a smooth component has a rate."""
     events = {"smooth": {"when": "x > 1"}, "rough": {"when": "v > 1"}}
     found = numbers(case_of("noisy-flow", events=events), SUMS)[0]
-    assert found["smooth"].entry_rate.value == pytest.approx(2 / 3 / TAU)
+    assert found["smooth"].entry_rate.value == pytest.approx(20 / 27 / TAU)
     assert found["rough"].entry_rate.value is None
     assert "infinitely often" in found["rough"].entry_rate.reason
     assert "infinitely often" in found["rough"].mean_spell.reason
@@ -134,5 +206,5 @@ def test_observable_that_is_not_finite() -> None:
     events, observables = numbers(case_of(), sums)
     assert observables["x"].mean.value is None
     assert "not finite" in observables["x"].mean.reason
-    assert events["often"].share.value == pytest.approx(7 / 60)
+    assert events["often"].share.value == pytest.approx(7 / 54)
     assert events["often"].share.error == pytest.approx(numbers(case_of(), SUMS)[0]["often"].share.error)

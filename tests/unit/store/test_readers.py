@@ -24,9 +24,7 @@ ENGINES = ["h5netcdf", "netcdf4"]
 
 
 @pytest.fixture(scope="module", params=[0, 2], ids=["leaking", "two"])
-def written(
-    request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory
-) -> tuple[Path, Estimate]:
+def written(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, Estimate]:
     path = tmp_path_factory.mktemp("readers") / "out.h5"
     estimate = make_estimate(n_regime=request.param)
     save(estimate, path)

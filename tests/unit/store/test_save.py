@@ -68,9 +68,7 @@ def fails_with(code: int) -> object:
         (errno.EIO, "Input/output error; give another path"),
     ],
 )
-def test_failing_write_leaves_the_old_file(
-    target: Path, monkeypatch: pytest.MonkeyPatch, code: int, said: str
-) -> None:
+def test_failing_write_leaves_the_old_file(target: Path, monkeypatch: pytest.MonkeyPatch, code: int, said: str) -> None:
     monkeypatch.setattr(write, "write_image", fails_with(code))
     estimate = make_estimate(side=4)
     with pytest.raises(OutputError, match=said) as caught:
@@ -110,9 +108,7 @@ def test_interruption_leaves_the_old_file(target: Path, monkeypatch: pytest.Monk
 
 
 @pytest.mark.parametrize("limit", [0, write.MEMORY_LIMIT])
-def test_fault_while_laying_out_carries_the_estimate(
-    target: Path, monkeypatch: pytest.MonkeyPatch, limit: int
-) -> None:
+def test_fault_while_laying_out_carries_the_estimate(target: Path, monkeypatch: pytest.MonkeyPatch, limit: int) -> None:
     """HDF5 reports a full disk as RuntimeError."""
 
     def fail(*_: object) -> None:
@@ -252,9 +248,7 @@ def test_link_is_followed(tmp_path: Path) -> None:
 
 def test_leftovers_of_the_same_target_are_swept(tmp_path: Path) -> None:
     stale = tmp_path / ".out.h5.0123456789abcdef.part"
-    others = [
-        tmp_path / name for name in (".out.h5.old.0123456789abcdef.part", ".new.h5.01.part", "out.h5.part")
-    ]
+    others = [tmp_path / name for name in (".out.h5.old.0123456789abcdef.part", ".new.h5.01.part", "out.h5.part")]
     for path in (stale, *others):
         path.write_bytes(b"half")
     check_target(tmp_path / "out.h5")
@@ -281,9 +275,7 @@ def test_age_decides_where_there_are_no_locks(tmp_path: Path, monkeypatch: pytes
     assert sorted(os.listdir(tmp_path)) == [fresh.name, "out.h5"]
 
 
-def test_part_swept_before_it_was_locked_is_made_again(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_part_swept_before_it_was_locked_is_made_again(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     lock, calls = publish.lock, []
 
     def swept_first(descriptor: int) -> bool | None:
@@ -301,9 +293,7 @@ def test_part_swept_before_it_was_locked_is_made_again(
 
 
 def test_file_tells_nothing_of_where_it_was_made(tmp_path: Path) -> None:
-    estimate = replace(
-        make_estimate(), command=f"perdure run {tmp_path}/a.toml --output={tmp_path}/out.h5 ~/x --quiet"
-    )
+    estimate = replace(make_estimate(), command=f"perdure run {tmp_path}/a.toml --output={tmp_path}/out.h5 ~/x --quiet")
     save(estimate, tmp_path / "out.h5")
     content = (tmp_path / "out.h5").read_bytes()
     for secret in (str(tmp_path), os.getcwd()):
@@ -311,8 +301,6 @@ def test_file_tells_nothing_of_where_it_was_made(tmp_path: Path) -> None:
     assert load(tmp_path / "out.h5").command == "perdure run a.toml --output=out.h5 x --quiet"
 
 
-@pytest.mark.parametrize(
-    "command", ["", "perdure run a.toml -o 'b c.h5'", "perdure run ../a.toml", "perdure 'x"]
-)
+@pytest.mark.parametrize("command", ["", "perdure run a.toml -o 'b c.h5'", "perdure run ../a.toml", "perdure 'x"])
 def test_command_without_absolute_paths_is_kept_verbatim(command: str) -> None:
     assert write.without_folders(command) == command
