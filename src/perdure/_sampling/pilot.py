@@ -32,6 +32,8 @@ BURST_FACTOR, NOISY_FACTOR = 8.0, 4.0
 
 # Fewest steps of a flow's burst: events are tested at steps, and short visits must not fall between two.
 FEWEST_STEPS = 64
+# Stands for infinity where quantiles are taken: between two infinities they are not a number.
+VAST = 1e300
 
 
 @dataclass(frozen=True)
@@ -171,11 +173,15 @@ def pace(flight: Flight, system: System, state: Floats, bursts: BurstOptions) ->
     rate = local_rate(flight, state)
     step = min(0.05 / rate, bursts.step or np.inf)
     most = 0.5 if system.is_noisy else 0.1
+    # starts from which no step can be made, such as a root of a negative number, say nothing of the pace
+    state = state[:, np.isfinite(flight.fly(state, step * 2.0**-70, 1)).all(axis=0)]
+    if state.shape[1] == 0:
+        return rate, step
     spread = state.std(axis=1)
     spread[spread == 0.0] = np.inf
     for halvings in range(70, -1, -1):
         moved = np.abs(flight.fly(state, step * 2.0**-halvings, 1) - state)
-        moved = np.where(np.isfinite(moved), moved, np.inf)
+        moved = np.where(np.isfinite(moved), moved, VAST)
         if np.any(np.quantile(moved, 0.75, axis=1) > most * spread):
             step *= 2.0 ** -(halvings + 1)
             return max(rate, 0.05 / step), step
@@ -326,7 +332,7 @@ def time_step(
     for _ in range(14):
         fine = flight.fly(points, duration / (2 * n_step), 2 * n_step)
         off = np.max(np.abs(fine - coarse) / width[:, None], axis=0)
-        change = float(np.quantile(np.where(np.isfinite(off), off, np.inf), 0.99))
+        change = float(np.quantile(np.where(np.isfinite(off), off, VAST), 0.99))
         if change < 0.01:
             break
         coarse, n_step = fine, 2 * n_step
