@@ -35,7 +35,7 @@ def cells_part(ladder: tuple[float, float, float]) -> float:
         return 0.0
     d1, d2 = abs(h - h2), abs(h2 - h4)
     ratio = min(max(d1 / d2 if d2 > 0.0 else 1.0, 0.5), 0.75)
-    return 0.5 * max(d1 * ratio / (1.0 - ratio), 0.25 * d2)
+    return float(0.5 * max(d1 * ratio / (1.0 - ratio), 0.25 * d2))
 
 
 def interval(value: float, error: float, freedom: float, unit: str, kind: str, cells: float | None = None) -> Quantity:
