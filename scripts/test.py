@@ -1,4 +1,7 @@
-"""Sets perdure up in this checkout and runs all checks: python3 scripts/test.py [arguments of pytest]"""
+"""Sets perdure up in this checkout and runs all checks: python3 scripts/test.py [arguments of pytest]
+
+With arguments of pytest, the short calibration table (scripts/verify.py) is left out.
+"""
 
 # No `from __future__ import annotations`, for the reason given in _environment.py.
 import sys
@@ -7,13 +10,14 @@ from _environment import prepare, run
 
 # pytest last: its summary closes the output.
 CHECKS = (("ruff", "check", "."), ("ruff", "format", "--check", "."), ("mypy",))
+CALIBRATION = ("python", "scripts/verify.py", "--short", "--coverage", "--control", "--convection", "--accuracy")
 
 
 def main(arguments: "list[str]") -> int:
     """0 if every check passed, else 1. A failed check does not keep the next ones from running."""
     prepare(extra="test")
     verdicts = []
-    for name, *rest in CHECKS:
+    for name, *rest in CHECKS if arguments else (*CHECKS, CALIBRATION):
         title = " ".join([name, *rest])
         print(f"\n== {title}", flush=True)
         verdicts.append((title, run(name, *rest)))

@@ -14,11 +14,12 @@ if TYPE_CHECKING:
     from perdure._case import Case, load_case
     from perdure._density import Density
     from perdure._pipeline import estimate
-    from perdure._records import Quantity
+    from perdure._records import Budget, Quantity
     from perdure._result import Result
     from perdure._result import open_file as open
 
 __all__ = [
+    "Budget",
     "Case",
     "Density",
     "Quantity",
@@ -35,6 +36,7 @@ __version__ = "0.1.0"
 
 # Public name -> (module, name there); an empty name stands for the module itself.
 _HOMES = {
+    "Budget": ("perdure._records", "Budget"),
     "Case": ("perdure._case", "Case"),
     "Density": ("perdure._density", "Density"),
     "Quantity": ("perdure._records", "Quantity"),

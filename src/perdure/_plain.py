@@ -12,9 +12,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike
 
-from perdure._records import EventResult, Marginal, ObservableResult, Quantity
+from perdure._records import EventResult, Floats, Marginal, ObservableResult, Quantity, Stage, Target
 
-__all__ = ["plain_quantity", "plain_regime"]
+__all__ = ["plain_quantity", "plain_regime", "plain_stage", "plain_target"]
 
 
 def plain_quantity(quantity: Quantity) -> dict[str, Any]:
@@ -57,7 +57,10 @@ def plain_regime(
             name: {
                 "edges": finite_list(marginal.edges),
                 "mass": finite_list(marginal.mass),
+                "low": optional_list(marginal.low),
+                "high": optional_list(marginal.high),
                 "error": finite_list(marginal.error),
+                "parts": {part: finite_list(error) for part, error in marginal.parts.items()},
                 "below": finite(marginal.below),
                 "above": finite(marginal.above),
                 "unit": marginal.unit,
@@ -65,6 +68,24 @@ def plain_regime(
             for name, marginal in marginals.items()
         },
         "modes": [],
+    }
+
+
+def plain_stage(stage: Stage) -> dict[str, Any]:
+    """Where bursts went: one stage of the run."""
+    counted = {"sweeps": int(stage.sweeps), "bursts": int(stage.bursts), "steps": int(stage.steps)}
+    return {"stage": stage.name, **counted, "seconds": finite(stage.seconds)}
+
+
+def plain_target(target: Target) -> dict[str, Any]:
+    """An accuracy that was asked for, what was reached, and what limits it where it was not met."""
+    return {
+        "event": target.event,
+        "number": target.number,
+        "wanted": finite(target.wanted),
+        "reached": finite(target.reached),
+        "met": bool(target.met),
+        "reason": target.reason,
     }
 
 
@@ -77,3 +98,8 @@ def finite(value: float | None) -> float | None:
 
 def finite_list(values: ArrayLike) -> list[float | None]:
     return [finite(value) for value in np.asarray(values, dtype=float).tolist()]
+
+
+def optional_list(values: Floats | None) -> list[float | None] | None:
+    """None where the numbers were not worked out."""
+    return None if values is None else finite_list(values)

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from perdure._density import Density
-from perdure._plain import plain_quantity, plain_regime
+from perdure._plain import plain_quantity, plain_regime, plain_stage, plain_target
 from perdure._records import (
     BoxGrid,
     CaseRecord,
@@ -26,7 +26,9 @@ from perdure._records import (
     Plan,
     Quantity,
     Regime,
+    Stage,
     Tally,
+    Target,
 )
 from perdure.errors import EstimateError, UsageError
 
@@ -135,6 +137,37 @@ class Result:
     @property
     def counts(self) -> Mapping[str, int]:
         return MappingProxyType(dict(self._held.counts))
+
+    @property
+    def effort(self) -> tuple[Stage, ...]:
+        """Where the bursts went, by stage; empty where it is not on record."""
+        return self._held.effort
+
+    @property
+    def cell_bursts(self) -> Integers | None:
+        """Bursts sent from each cell, shape (n_cell,); None where it is not on record."""
+        return self._held.cell_bursts
+
+    @property
+    def focus(self) -> tuple[float, tuple[float, ...]] | None:
+        """Part of the cells that got half of the bursts, the most favoured ones, and their mass in each regime.
+
+        No unit. None where bursts by cell are not on record.
+        """
+        bursts = self.cell_bursts
+        if bursts is None or not bursts.any():
+            return None
+        order = np.argsort(-bursts, kind="stable")
+        n_favoured = int(np.searchsorted(2 * np.cumsum(bursts[order]), bursts.sum())) + 1
+        favoured = np.zeros(len(bursts), dtype=bool)
+        favoured[order[:n_favoured]] = True
+        laws = [self._law(k) for k in range(len(self._weights()))]
+        return n_favoured / len(bursts), tuple(float(mass[favoured[cell]].sum()) for cell, mass in laws)
+
+    @property
+    def targets(self) -> tuple[Target, ...]:
+        """Accuracies that were asked for, and what was reached; empty where nothing was steered."""
+        return self._held.targets
 
     @property
     def command(self) -> str:
@@ -269,6 +302,7 @@ class Result:
                 "outcome": self.outcome,
                 "messages": list(self.messages),
                 "checks_passed": self.checks_passed,
+                "accuracy": self.case.accuracy,
             },
             "regimes": [
                 plain_regime(weight, self._events(k), self._observables(k), self._marginals(k))
@@ -276,8 +310,15 @@ class Result:
             ],
             "cells": self.n_cell,
             "outside_share": plain_quantity(self.outside_share),
+            "effort": [plain_stage(stage) for stage in self.effort],
+            "half_of_bursts": self._plain_focus(),
+            "targets": [plain_target(target) for target in self.targets],
             "crosscheck": None,
         }
+
+    def _plain_focus(self) -> dict[str, Any] | None:
+        focus = self.focus
+        return None if focus is None else {"cells": focus[0], "mass": list(focus[1])}
 
     # ------------------------------------------------- per regime; a file reads each part by itself
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import fields, is_dataclass
+from dataclasses import fields, is_dataclass, replace
 
 import numpy as np
 
@@ -24,8 +24,10 @@ from perdure._records import (
     Plan,
     Quantity,
     Regime,
+    Stage,
     System,
     Tally,
+    Target,
 )
 
 CASE_TEXT = """[case]
@@ -221,6 +223,45 @@ def make_estimate(
         command="perdure run cases/pegel.toml -o pegel.h5",
         created="2024-05-06T07:08:09+00:00",
     )
+
+
+def make_steered(estimate: Estimate, seed: int = 5) -> Estimate:
+    """The same estimate as a run that was steered by its accuracy gives it: reseeded bursts, parts, effort, targets."""
+    rng = np.random.default_rng(seed)
+    regimes = tuple(
+        replace(regime, marginals={name: with_parts(m, rng) for name, m in regime.marginals.items()})
+        for regime in estimate.regimes
+    )
+    tally = estimate.tally
+    if tally is not None:
+        weight = (tally.count * rng.uniform(0.5, 2.0, tally.count.shape)).astype(np.float32)
+        bursts = np.add.reduceat(weight.astype(np.float64), tally.pointer[:-1], axis=0)
+        tally = Tally(tally.pointer, tally.column, weight, bursts, together=True)
+    return replace(
+        estimate,
+        regimes=regimes,
+        tally=tally,
+        effort=(
+            Stage("pilot", 1, 16, 160_000, 0.25),
+            Stage("cover", 3, 2000, 400_000, 1.5),
+            Stage("reseeded", 24, 10_000, 2_000_000, 9.75),
+            Stage("half step", 6, 3984, 3_000_000_000_000, 11.0),
+        ),
+        targets=(
+            Target(EVENTS[0], "share", 0.02, 0.0195, True),
+            Target(EVENTS[0], "return_period", 0.02, 0.25, False, "the time step « half »"),
+            Target(EVENTS[1], "share", 0.02, None, False, "never seen"),
+        ),
+        cell_bursts=rng.integers(0, 5000, len(estimate.keys)),
+    )
+
+
+def with_parts(marginal: Marginal, rng: np.random.Generator) -> Marginal:
+    """The same histogram with the parts of its errors and its intervals."""
+    parts = {name: rng.uniform(0.0, 1e-3, len(marginal.mass)) for name in ("sampling", "cells", "step")}
+    error = np.sqrt(sum(part**2 for part in parts.values()))
+    low, high = np.maximum(marginal.mass - 2.0 * error, 0.0), marginal.mass + 2.0 * error
+    return replace(marginal, error=error, parts=parts, low=low, high=high)
 
 
 def assert_same(found: object, expected: object, where: str = "estimate") -> None:

@@ -20,12 +20,14 @@ def flat_map(
     }
 
 
-def plane_map(x: str, y: str, events: dict[str, dict[str, Any]], **more: Any) -> dict[str, Any]:
-    """Tables of a map in two variables."""
+def plane_map(
+    x: str, y: str, events: dict[str, dict[str, Any]], observables: dict[str, str] | None = None, **more: Any
+) -> dict[str, Any]:
+    """Tables of a map in two variables; the first two moments of both are always observed."""
     return {
         "system": {"kind": "map", "state": ["x", "y"], "equations": {"x": x, "y": y}} | more,
         "events": events,
-        "observables": {"x": "x", "y": "y", "x2": "x**2", "y2": "y**2"},
+        "observables": {"x": "x", "y": "y", "x2": "x**2", "y2": "y**2"} | (observables or {}),
     }
 
 
@@ -69,7 +71,8 @@ TABLES: dict[str, dict[str, Any]] = {
     ),
     "P03-gauss": flat_map(
         "1/x - floor(1/x) if x > 0 else 0",
-        {"A": "0 <= x <= 0.1", "B": "0.2 <= x <= 0.3", "C": "0.9 <= x <= 1", "D": "1/3 < x <= 1/2"},
+        {"A": "0 <= x <= 0.1", "B": "0.2 <= x <= 0.3", "C": "0.9 <= x <= 1", "D": "1/3 < x <= 1/2"}
+        | {f"digit{k}": f"1/{k + 1} < x <= 1/{k}" for k in (1, 3, 4, 5)},
         {"x": "x", "x2": "x**2", "digit": "log(floor(1/x)) if x > 0 else 0"},
     ),
     "P04-golden-beta": flat_map(
@@ -135,7 +138,21 @@ TABLES: dict[str, dict[str, Any]] = {
             "D": {"when": "0.4 < x < 0.8 and -0.2 < y < 0.2"},
             "E": ball([-0.6, 0.2], 0.2),
         },
+        {"ax": "abs(x)"},
         parameters={"a": 1.4, "b": 0.3},
+    ),
+    "P14-lozi": plane_map(
+        "1 - a*abs(x) + y",
+        "b*x",
+        {
+            "A": {"when": "x > 0.9"},
+            "B": ball([0.3, 0.3], 0.2),
+            "C": {"when": "x < -0.8"},
+            "D": {"when": "0.4 < x < 0.8 and -0.4 < y < 0"},
+            "E": ball([-0.4, 0.4], 0.25),
+        },
+        {"ax": "abs(x)"},
+        parameters={"a": 1.7, "b": 0.5},
     ),
     "P15-baker": plane_map(
         "la*x if y < p else (1 - lb) + lb*x",
@@ -224,7 +241,22 @@ TABLES: dict[str, dict[str, Any]] = {
             "E": {"when": "z > 40"},
             "F": {"box": {"x": [1, 5], "y": [1, 7], "z": [15, 25]}},
         },
-        "observables": {"z": "z", "x2": "x**2", "z2": "z**2", "y2": "y**2"},
+        "observables": {"x": "x", "z": "z", "x2": "x**2", "z2": "z**2", "y2": "y**2", "x2z": "x**2*z"},
+    },
+    "P23-roessler": {
+        "system": {
+            "kind": "flow",
+            "state": ["x", "y", "z"],
+            "parameters": {"a": 0.2, "b": 0.2, "c": 5.7},
+            "equations": {"x": "-y - z", "y": "x + a*y", "z": "b + z*(x - c)"},
+        },
+        "events": {
+            "A": {"when": "x < -5"},
+            "B": ball([0, -6, 0], 2.5),
+            "C": {"when": "x > 0 and z > 5"},
+            "D": ball([4, 4, 0], 2),
+        },
+        "observables": {"x": "x", "y": "y", "z": "z", "x2": "x**2", "y2": "y**2", "z2": "z**2"},
     },
     "P29-triple-gradient": {
         "system": {"kind": "flow", "state": ["x"], "equations": {"x": "-x*(x**2 - 1)*(x**2 - 4)"}},

@@ -51,9 +51,11 @@ def regime_number(result: Result, regime: str) -> int:
 
 
 def quantity(result: Result, number: str, regime: str = "") -> Quantity:
-    """The number of a result that goes by the name `number`."""
-    kind, name = number.rsplit(" ", 1)
+    """The number of a result that goes by the name `number`; "weight" is that of the regime."""
     one = result.regimes[regime_number(result, regime)]
+    if number == "weight":
+        return one.weight
+    kind, name = number.rsplit(" ", 1)
     if kind in ("mean", "variance"):
         return getattr(one.observables[name], kind)
     return getattr(one.events[name], kind.replace(" ", "_"))

@@ -259,9 +259,17 @@ def test_events_on_components_without_noise_have_a_rate(event: str, has_rate: bo
 # --------------------------------------------------------------------------------------- reproduction
 
 
+def numbers_of(result: Result) -> dict[str, Any]:
+    """All plain data but the time on the clock."""
+    found = result.to_dict()
+    for stage in found["effort"]:
+        del stage["seconds"]
+    return found
+
+
 def assert_same(one: Result, two: Result) -> None:
     """All numbers and arrays are equal to the last bit."""
-    assert one.to_dict() == two.to_dict()
+    assert numbers_of(one) == numbers_of(two)
     for a, b in zip(one.regimes, two.regimes, strict=True):
         assert a.mass.tobytes() == b.mass.tobytes()
         assert a.cell.tobytes() == b.cell.tobytes()

@@ -40,8 +40,9 @@ class Case(CaseRecord):
     title : str
     seed : int
         From 0 to 2**128.
-    accuracy : float
-        Relative error asked for, between 0 and 1. No unit.
+    accuracy : float or None
+        Between 0 and 1: bursts are sent until the 95 percent interval of every event share and return period has a
+        half-width below `accuracy` times its value. No unit. None: standard effort, nothing is steered.
     caution : str
         Shown with the results.
 
@@ -78,7 +79,7 @@ class Case(CaseRecord):
         study: Table | None = None,
         title: str = "untitled",
         seed: int = 0,
-        accuracy: float = 0.05,
+        accuracy: float | None = None,
         caution: str = "",
     ) -> None:
         given = {

@@ -81,7 +81,7 @@ def build_case(
     return CaseRecord(
         title=title if head.title is None else head.title,
         seed=head.seed if seed is None else seed,
-        accuracy=float(head.accuracy),
+        accuracy=None if head.accuracy is None else float(head.accuracy),
         caution=head.caution,
         system=system,
         events=events,

@@ -103,11 +103,11 @@ def read_bursts(problems: Problems, tables: Mapping[str, Any], declared: Declare
             ("bursts", "step"),
             f"found step {table.step!r} above duration {table.duration!r}; allowed: at most the duration; lower it",
         )
-    if table.reseed:
+    if table.sweeps is not None and table.reseed is False:
         problems.add(
-            ("bursts", "reseed"),
-            "found true; reseeding is not available in this version yet; allowed: false; write reseed = "
-            "false or leave it out",
+            ("bursts", "sweeps"),
+            "found sweeps beside reseed = false; allowed: sweeps of reseeded bursts only; write reseed = true, or "
+            "remove sweeps",
         )
     if table.seeds not in (None, *SEEDS):
         close = grammar.nearest(table.seeds, SEEDS)

@@ -57,7 +57,7 @@ class CaseTable(Table):
 
     title: Line | None = Field(default=None, description="a text on one line", examples=["Convection loop"])
     seed: int = Field(default=0, ge=0, le=LARGEST_SEED, description="a whole number from 0 to 2**128", examples=[7])
-    accuracy: float = Field(default=0.05, gt=0, lt=1, description="a number between 0 and 1", examples=[0.05])
+    accuracy: float | None = Field(default=None, gt=0, lt=1, description="a number between 0 and 1", examples=[0.05])
     caution: Lines = Field(default="", description="a text without control characters", examples=["Screening only."])
 
 
@@ -154,7 +154,7 @@ class BurstsTable(Table):
     per_cell: int | None = Field(
         default=None, ge=2, le=10**9, description="a whole number from 2 to 10**9", examples=[64]
     )
-    reseed: bool | None = Field(default=None, description="false", examples=[False])
+    reseed: bool | None = Field(default=None, description="true or false", examples=[True])
     sweeps: int | None = Field(default=None, ge=1, le=10**6, description="a whole number from 1 to 10**6", examples=[8])
     seeds: str = Field(default="sobol", description='"uniform" or "sobol"', examples=["sobol"])
     scheme: str | None = Field(default=None, description="a scheme in quotes", examples=["rk4"])

@@ -13,6 +13,7 @@ import click
 from perdure._cli.invocation import verbose_option
 from perdure._cli.output import json_text, print_problems, print_text
 from perdure._cli.progress import reporter_for
+from perdure._cli.steering import steering, steering_options, unmet_lines
 from perdure._cli.table import results_text
 from perdure.errors import UsageError
 
@@ -34,6 +35,7 @@ MOST_WORKERS = 1024
 )
 @click.option("--workers", type=click.IntRange(1, MOST_WORKERS), help="Threads; by default all processors.")
 @click.option("--seed", type=click.IntRange(min=0), help="Seed instead of the one in CASE.")
+@steering_options
 @click.option("--json", "as_json", is_flag=True, help="Print the results as one JSON object.")
 @click.option("--quiet", is_flag=True, help="Print errors only (and the JSON object, if asked for).")
 @verbose_option
@@ -42,6 +44,10 @@ def run(
     output: Path | None,
     workers: int | None,
     seed: int | None,
+    accuracy: float | None,
+    budget_steps: float | None,
+    budget_minutes: float | None,
+    budget_memory: float | None,
     as_json: bool,
     quiet: bool,
     verbose: bool,
@@ -49,19 +55,21 @@ def run(
     """Estimate the long-run statistics of CASE, a TOML file, and save its density file.
 
     Progress goes to standard error, results to standard output. Exit status: 0 done; 1 saved, but a stated
-    check failed; 2 wrong case or arguments; 3 interrupted or out of resources; 70 a fault of perdure.
+    check failed or an accuracy was not reached; 2 wrong case or arguments; 3 interrupted or out of resources; 70 a
+    fault of perdure.
     """
     target = Path(f"{case.stem}.h5") if output is None else output
     _check_target(target, case)
     from perdure._case import load_case
 
     checked = load_case(case, seed=seed)
+    steered, told = steering(checked.accuracy, accuracy, budget_steps, budget_minutes, budget_memory)
     # Only now: the engine takes a second to load, and the mistakes of a case should not wait for it.
     from perdure._pipeline import estimate
 
-    command = ["perdure", "run", case.name, *([] if seed is None else ["--seed", str(seed)])]
+    command = ["perdure", "run", case.name, *([] if seed is None else ["--seed", str(seed)]), *told]
     with contextlib.closing(reporter_for(quiet=quiet)) as progress:
-        result = estimate(checked, workers=workers, progress=progress, command=shlex.join(command))
+        result = estimate(checked, workers=workers, progress=progress, command=shlex.join(command), **steered)
     sha256: str | None = None
     try:
         sha256 = result.save(target)
@@ -94,9 +102,11 @@ def _check_target(target: Path, case: Path) -> None:
 
 
 def _status(result: Result, target: Path, quiet: bool) -> int:
-    """Exit status 0 or 1; a failed check is told on standard error."""
-    if result.checks_passed:
+    """Exit status 0 or 1; a failed check and an accuracy that was not reached are told on standard error."""
+    unmet = unmet_lines(result.targets)
+    if result.checks_passed and not unmet:
         return 0
-    messages = [*result.messages] if quiet else []
-    print_problems("\n".join([*messages, f"{target} is saved, but a stated check failed (exit status 1)"]))
+    messages = [*result.messages] if quiet and not result.checks_passed else []
+    what = "an accuracy was not reached" if result.checks_passed else "a stated check failed"
+    print_problems("\n".join([*messages, *unmet, f"{target} is saved, but {what} (exit status 1)"]))
     return 1

@@ -5,75 +5,58 @@ from __future__ import annotations
 from collections.abc import Iterable, Sequence
 from typing import TYPE_CHECKING
 
-from perdure._cli.rounding import bound, rounded, rounded_like, seconds_text
+from perdure._cli.budget import covered
+from perdure._cli.numbers import (
+    EVENT_NUMBERS,
+    PARTS,
+    aligned,
+    event_numbers,
+    observable_numbers,
+    part_cells,
+    parts_of,
+    percent,
+    quantity_cells,
+)
+from perdure._cli.rounding import seconds_text
+from perdure._cli.steering import reached_text
 
 if TYPE_CHECKING:
-    from perdure._records import Quantity, Regime
+    from perdure._records import EventResult, Quantity, Regime, Target
     from perdure._result import DensityFile, Result
 
-__all__ = ["quantity_cells", "results_text"]
+__all__ = ["results_text"]
 
 CAUTION = "Screening estimate of a model; local codes and licensed practice decide."
-# Two-sided 95 percent point of the normal law, to size the digits of an interval without a standard error.
-NORMAL_95 = 1.96
 
 
 def results_text(result: Result | DensityFile, *, verbose: bool = False) -> str:
-    """Title, outcome, numbers with their errors, cost and caution.
+    """Title, outcome, numbers with their errors, accuracies asked for, cost and caution.
 
     Parameters
     ----------
     result : Result or DensityFile
     verbose : bool
-        Adds the seconds of every stage.
+        Adds what every stage took.
     """
     blocks = [[result.title, f"outcome: {result.outcome.replace('-', ' ')}"]]
     blocks[0] += [f"  {message}" for message in result.messages]
     if not result.checks_passed:
         blocks[0].append("  a stated check failed: do not rely on the numbers before the messages above are dealt with")
+    parts = _shown_parts(result.regimes)
     for position, regime in enumerate(result.regimes):
         if len(result.regimes) > 1:
             blocks.append([_regime_title(regime, position, len(result.regimes))])
-        blocks += _regime_blocks(regime)
+        blocks += _regime_blocks(regime, parts)
     blocks.append(
-        _table([["outside share", *quantity_cells(result.outside_share)]], ("", "value", "95 percent interval"))
+        aligned([["outside share", *quantity_cells(result.outside_share)]], ("", "value", "95 percent interval"))
     )
-    blocks.append([_covered(result)])
-    blocks.append(_cost(result, verbose))
+    blocks.append([covered(result)])
+    if result.targets:
+        blocks.append(_targets(result.targets))
+    blocks.append(_cost(result, verbose) + _effort(result, verbose))
     if result.caution:
         blocks.append([result.caution, CAUTION])
     return "\n\n".join("\n".join(block) for block in blocks)
-
-
-def quantity_cells(quantity: Quantity) -> tuple[str, str]:
-    """A number as (value with error and unit, 95 percent interval).
-
-    Without a number the first text is the bound or the word "none", with the reason; the second is empty.
-    """
-    unit = "" if quantity.unit == "1" else f" {quantity.unit}"
-    if quantity.value is None:
-        return _bound_or_none(quantity, unit), ""
-    error = quantity.error or 0.0
-    value, error_text = rounded(quantity.value, error)
-    text = f"{value} ± {error_text}{unit}" if error_text else f"{value}{unit}"
-    if quantity.reason:
-        text += f" ({quantity.reason})"
-    if quantity.low is None or quantity.high is None or quantity.low == quantity.high:
-        return text, ""
-    digits = error or (quantity.high - quantity.low) / (2.0 * NORMAL_95)
-    # A number that is exactly zero has no size to write its ends with.
-    size = quantity.value or max(abs(quantity.low), abs(quantity.high))
-    low, high = (rounded_like(end, size, digits) for end in (quantity.low, quantity.high))
-    return text, f"{low} to {high}"
-
-
-def _bound_or_none(quantity: Quantity, unit: str) -> str:
-    reason = quantity.reason.removesuffix(": upper bound").removesuffix(": lower bound")
-    if quantity.high is not None:
-        return f"< {bound(quantity.high, upper=True)}{unit} ({reason or 'never seen'})"
-    if quantity.low is not None:
-        return f"> {bound(quantity.low, upper=False)}{unit} ({reason or 'lower bound'})"
-    return f"none: {reason or 'no reason is on record'}"
 
 
 def _regime_title(regime: Regime, position: int, n_regime: int) -> str:
@@ -82,30 +65,28 @@ def _regime_title(regime: Regime, position: int, n_regime: int) -> str:
     return f"regime {position + 1} of {n_regime}: weight {value}{between}"
 
 
-def _regime_blocks(regime: Regime) -> list[list[str]]:
+def _shown_numbers(event: EventResult) -> list[tuple[str, Quantity]]:
+    """The entry rate is told by the return period."""
+    return [(what, number) for what, number in event_numbers(event) if what != EVENT_NUMBERS["entry_rate"]]
+
+
+def _shown_parts(regimes: Sequence[Regime]) -> tuple[str, ...]:
+    """Parts of the error that get a column; none where all errors are those of sampling alone, told by one line."""
+    numbers = [n for regime in regimes for event in regime.events.values() for n in _shown_numbers(event)]
+    numbers += [n for regime in regimes for o in regime.observables.values() for n in observable_numbers(o)]
+    parts = parts_of(quantity for _, quantity in numbers)
+    return parts if set(parts) - {"sampling"} else ()
+
+
+def _regime_blocks(regime: Regime, parts: Sequence[str]) -> list[list[str]]:
     """A table of events and one of observables; without the one that has no rows."""
-    events = [
-        row
-        for name, event in regime.events.items()
-        for row in _rows(
-            name,
-            [
-                ("share of time", event.share),
-                ("return period", event.return_period),
-                ("mean spell", event.mean_spell),
-            ],
-        )
-    ]
-    observables = [
-        row
-        for name, observable in regime.observables.items()
-        for row in _rows(name, [("mean", observable.mean), ("variance", observable.variance)])
-    ]
-    tables = (("event", events), ("observable", observables))
-    return [_table(rows, (head, "", "value", "95 percent interval")) for head, rows in tables if rows]
+    events = [row for name, event in regime.events.items() for row in _rows(name, _shown_numbers(event), parts)]
+    observables = [row for name, o in regime.observables.items() for row in _rows(name, observable_numbers(o), parts)]
+    head = ("", "value", "95 percent interval", *(PARTS.get(part, part) for part in parts))
+    return [aligned(rows, (what, *head)) for what, rows in (("event", events), ("observable", observables)) if rows]
 
 
-def _rows(name: str, numbers: Iterable[tuple[str, Quantity]]) -> list[list[str]]:
+def _rows(name: str, numbers: Iterable[tuple[str, Quantity]], parts: Sequence[str]) -> list[list[str]]:
     """One row per number; the name stands in the first only."""
     rows, told = [], ""
     for position, (what, quantity) in enumerate(numbers):
@@ -114,35 +95,48 @@ def _rows(name: str, numbers: Iterable[tuple[str, Quantity]]) -> list[list[str]]
             cells = ("none, as above", "")
         else:
             told = cells[0]
-        rows.append(["" if position else name, what, *cells])
+        rows.append(["" if position else name, what, *cells, *part_cells(quantity, parts)])
     return rows
 
 
-def _table(rows: Sequence[Sequence[str]], head: Sequence[str]) -> list[str]:
-    """Columns aligned on the left, two blanks apart.
+def _targets(targets: Sequence[Target]) -> list[str]:
+    """A table of the accuracies asked for: half-widths of the 95 percent intervals over the values."""
+    rows = [
+        [
+            target.event,
+            EVENT_NUMBERS.get(target.number, target.number),
+            f"{target.wanted:g}",
+            reached_text(target),
+            "met" if target.met else f"not met: {target.reason or 'no reason is on record'}",
+        ]
+        for target in targets
+    ]
+    return aligned(rows, ("accuracy of event", "", "wanted", "reached", ""))
 
-    A text before an empty last column, such as a long reason, runs on and widens no column.
-    """
-    lines = [list(head), *(list(row) for row in rows)]
-    n_column = len(head)
-    widths = [max((len(line[k]) for line in lines if k < n_column - 2 or line[-1]), default=0) for k in range(n_column)]
-    texts = ["  ".join(cell.ljust(width) for cell, width in zip(line, widths, strict=True)) for line in lines]
-    return [text.rstrip() for text in texts]
 
-
-def _covered(result: Result | DensityFile) -> str:
-    """Which parts of the error budget are in the errors shown; nobody shall take them for the whole."""
-    numbers = [result.outside_share]
-    for regime in result.regimes:
-        numbers += [number for event in regime.events.values() for number in (event.share, event.return_period)]
-        numbers += [observable.mean for observable in regime.observables.values()]
-    parts = sorted({part for number in numbers for part in number.parts})
-    if set(parts) <= {"sampling"}:
-        return "errors and intervals are those of sampling alone; not in them: cell size and time step"
-    steps = [("step", "time step")] if result.kind.endswith("flow") else []
-    missing = [name for part, name in (("cells", "cell size"), *steps) if part not in parts]
-    rest = f"; not in them: {' and '.join(missing)}" if missing else ""
-    return f"errors and intervals include: {', '.join(parts)}{rest}"
+def _effort(result: Result | DensityFile, verbose: bool) -> list[str]:
+    """Where the bursts went: by stage, and to which cells."""
+    lines = []
+    total = sum(stage.bursts for stage in result.effort)
+    if total:
+        shares = (f"{stage.name} {percent(stage.bursts / total)}" for stage in result.effort)
+        lines.append(f"bursts by stage: {', '.join(shares)}")
+    if verbose:
+        lines += [
+            f"  {stage.name}: sweeps {stage.sweeps}, bursts {stage.bursts}, steps {stage.steps}, "
+            f"time {seconds_text(stage.seconds)}"
+            for stage in result.effort
+        ]
+    focus = result.focus
+    if focus is not None:
+        cells, masses = focus
+        several = len(masses) > 1
+        held = [
+            f"{percent(mass)} of the mass{f' of regime {k}' if several else ''}" for k, mass in enumerate(masses, 1)
+        ]
+        which = f", which hold {' and '.join(held)}" if held else ""
+        lines.append(f"half of the bursts went to {percent(cells)} of the cells{which}")
+    return lines
 
 
 def _cost(result: Result | DensityFile, verbose: bool) -> list[str]:

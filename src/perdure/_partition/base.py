@@ -25,6 +25,10 @@ class Discretiser(Protocol):
         """Fill key (n,) for points (n_dim, n)."""
         ...
 
+    def centres(self, keys: Integers) -> Floats:
+        """A point inside each cell, shape (n_dim, n). Units of the state."""
+        ...
+
     def fill_seeds(self, keys: Integers, first: Integers, n_replicate: int, sweep: int, state: Floats) -> None:
         """Fill state (n_dim, n_burst) with seed points; cell i owns bursts first[i] to first[i + 1]."""
         ...

@@ -45,6 +45,9 @@ class Boxes:
         grid = self.grid
         locate(state, grid.lower, grid.width, grid.counts, grid.periodic, key)
 
+    def centres(self, keys: Integers) -> Floats:
+        return np.ascontiguousarray(self.grid.centres(keys).T)
+
     def fill_seeds(self, keys: Integers, first: Integers, n_replicate: int, sweep: int, state: Floats) -> None:
         grid = self.grid
         index = grid.indices(keys)

@@ -5,7 +5,6 @@ from __future__ import annotations
 import os
 import platform
 import time
-from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
 
@@ -13,23 +12,13 @@ import numpy as np
 
 import perdure
 from perdure._pipeline.prepare import Prepared, prepare
-from perdure._pipeline.sampled import Sampled, sample_all
+from perdure._pipeline.run import CHECK_PART, Found, Run
+from perdure._pipeline.steering import FIRST, checked_request, steered
 from perdure._pipeline.watch import Clock, Progress, silent
-from perdure._records import CaseRecord, Estimate, Floats, Integers, Plan, Quantity, Regime
+from perdure._records import Budget, CaseRecord, Estimate, Plan, Target
 from perdure._result import Result
-from perdure._sampling import kernel_for
-from perdure._spectrum import ClassSolver, absorption, parts_without, period_of, visits
-from perdure._statistics import (
-    Findings,
-    marginal_numbers,
-    no_share,
-    outcome_of,
-    outside_quantity,
-    regime_numbers,
-    regime_weights,
-)
-from perdure._streams import generator
-from perdure._transitions import TransitionMatrix, lumped, scattered_slots
+from perdure._sampling import PLAIN_PART, burst_budget, kernel_for
+from perdure._statistics import no_share
 
 __all__ = ["estimate", "forecast_cost", "plan"]
 
@@ -40,12 +29,17 @@ def plan(case: CaseRecord) -> Plan:
 
 
 def forecast_cost(case: CaseRecord, made: Plan) -> dict[str, float]:
-    """Expected cells, bursts, steps, peak memory (bytes) and time (seconds on this machine) of a run."""
+    """Expected cells, bursts, steps, peak memory (bytes) and time (seconds on this machine) of a run.
+
+    Of standard effort: what an accuracy takes is not known beforehand.
+    """
     ready = Prepared(case, *kernel_for(case), made, np.zeros(len(case.observables)))
     flight, n_sum = ready.flight, ready.n_sum
     # with noise the cover grows into the tails
     cells = int((2.0 if case.system.is_noisy else 1.2) * made.pilot["cells_expected"])
-    bursts = cells * made.per_cell
+    bursts = cells * made.per_cell + burst_budget(made.n_step) * (
+        CHECK_PART if case.bursts.reseed is False else 1.0 - PLAIN_PART
+    )
     centres = np.ascontiguousarray(made.grid.centres(made.seed_keys[:4096]).T)
     state = np.repeat(centres, max(1, 4096 // centres.shape[1]), axis=1)
     begun = time.perf_counter()
@@ -53,14 +47,20 @@ def forecast_cost(case: CaseRecord, made: Plan) -> dict[str, float]:
     rate = state.shape[1] * made.n_step / (time.perf_counter() - begun)
     steps = bursts * made.n_step
     entries = min(bursts, cells * 64)
-    memory = 2.5e8 + entries * (8 + 2 * made.n_replicate) + cells * (made.n_replicate * n_sum * 24 + 800)
+    memory = 2.5e8 + entries * (12 + 12 * made.n_replicate) + cells * (made.n_replicate * n_sum * 24 + 800)
     solves = entries * (n_sum + 32) * 40 * 1e-9
     seconds = 3.0 + 1.8 * steps / rate / max(os.cpu_count() or 1, 1) + entries * 1e-6 + solves
-    return {"cells": cells, "bursts": bursts, "steps": steps, "memory_bytes": memory, "seconds": seconds}
+    return {"cells": cells, "bursts": int(bursts), "steps": int(steps), "memory_bytes": memory, "seconds": seconds}
 
 
 def estimate(
-    case: CaseRecord, *, workers: int | None = None, progress: Progress | None = None, command: str = ""
+    case: CaseRecord,
+    *,
+    workers: int | None = None,
+    progress: Progress | None = None,
+    command: str = "",
+    accuracy: float | None = None,
+    budget: Budget | None = None,
 ) -> Result:
     """Long-run statistics of a case: what ``perdure run`` computes.
 
@@ -73,6 +73,11 @@ def estimate(
         Called as progress(stage, done, total).
     command : str
         Kept in the result, for the record.
+    accuracy : float or None
+        In place of that of the case. Bursts are sent until the 95 percent interval of every event share and return
+        period has a half-width of at most `accuracy` times its value, or the budget is spent.
+    budget : Budget or None
+        What a run steered by its accuracy may spend.
 
     Returns
     -------
@@ -82,159 +87,51 @@ def estimate(
     Raises
     ------
     CaseError
-        The case cannot be run as written.
+        The case cannot be run as written; accuracy or budget are out of range.
     NoAttractorError
         Every pilot trajectory left all bounds.
     NotConvergedError
         A solve stopped above its tolerance.
     """
     report, clock = progress or silent, Clock()
-    ready, done, classes = sample_all(prepare(case, report, clock), workers or os.cpu_count() or 1, report)
-    clock.stage("bursts")
-    transition = TransitionMatrix(done.all.tally)
-    n = len(done.keys)
-    members = [cells for cells in classes.members if cells[0] < n]
-    # what never comes back from outside ends there: a closed class, but no regime
-    ends = (*members, *(cells for cells in classes.members if cells[0] >= n))
-    basins = absorption(transition, ends)[:, : len(members)] if len(ends) > 1 or classes.leaks.any() else None
-    weights = regime_weights(transition, ends, basins, visits, n)
-    judged = []
-    for k, cells in enumerate(members):
-        report("regime", k, len(members))
-        judged.append(regime_of(ready, done, transition, cells, weights[k], clock))
-    order = sorted(range(len(judged)), key=lambda k: -(weights[k].value or 0.0))
-    state = Findings(
-        ready.plan,
-        done.counts,
-        [judged[k].regime for k in order],
-        classes.leaks,
-        any(item.rough for item in judged),
-        max((item.apart for item in judged), default=0.0),
-        done.settled,
-        pilot_share(ready.plan, done, members),
-    )
-    outcome, messages, passed = outcome_of(case, state)
-    if outcome == "leaking":
-        order = []
+    asked = checked_request(case, accuracy, budget)
+    ready = prepare(case, report, clock, 1.0 if asked is None else FIRST)
+    targets: tuple[Target, ...] = ()
+    if asked is not None:
+        run, found, targets = steered(ready, asked, budget, clock, report, workers)
+    else:
+        run = Run(ready, clock, report, workers)
+        run.reseed()
+        run.halve()
+        found = run.solve()
     report("done", 1, 1)
-    return Result(
-        Estimate(
-            case=case,
-            plan=ready.plan,
-            outcome=outcome,
-            messages=messages,
-            checks_passed=passed,
-            grid=done.grid,
-            keys=done.keys,
-            regimes=tuple(judged[k].regime for k in order),
-            basins=None if basins is None else basins[:n, order].astype(np.float32),
-            outside_share=judged[order[0]].outside if order else no_share(),
-            tally=done.all.tally if case.output.matrix else None,
-            timings=clock.seconds,
-            packages=versions(),
-            counts=done.counts,
-            command=command,
-            created=datetime.now(UTC).isoformat(timespec="seconds"),
-        )
+    return Result(estimate_of(run, found, command, targets))
+
+
+def estimate_of(run: Run, found: Found, command: str, targets: tuple[Target, ...]) -> Estimate:
+    """The record of a run."""
+    done, case = run.done, run.ready.case
+    return Estimate(
+        case=case,
+        plan=run.ready.plan,
+        outcome=found.outcome,
+        messages=found.messages,
+        checks_passed=found.passed,
+        grid=done.grid,
+        keys=done.keys,
+        regimes=tuple(item.regime for item in found.judged),
+        basins=None if found.basins is None else found.basins.astype(np.float32),
+        outside_share=found.judged[0].outside if found.judged else no_share(),
+        tally=done.all.tally if case.output.matrix else None,
+        timings=run.clock.seconds,
+        packages=versions(),
+        counts=done.counts,
+        command=command,
+        created=datetime.now(UTC).isoformat(timespec="seconds"),
+        effort=run.stages,
+        targets=targets,
+        cell_bursts=done.all.sent[: len(done.keys)],
     )
-
-
-def pilot_share(made: Plan, done: Sampled, members: list[Integers]) -> float:
-    """Part of the pilot's points that lie in the cells of the regimes."""
-    held = (
-        done.lattice_keys[np.concatenate([cells[cells < len(done.keys)] for cells in members])]
-        if members
-        else made.seed_keys[:0]
-    )
-    return float(made.seed_share[np.isin(made.seed_keys, held)].sum())
-
-
-@dataclass(frozen=True)
-class Judged:
-    """A regime, its share of time outside, and what speaks against it.
-
-    Attributes
-    ----------
-    rough : bool
-        Solves behind the error bars stopped above their tolerance.
-    apart : float
-        Mass of the second largest part of its cells that only the outside state links with the largest.
-    """
-
-    regime: Regime
-    outside: Quantity
-    rough: bool
-    apart: float
-
-
-def regime_of(
-    ready: Prepared,
-    done: Sampled,
-    transition: TransitionMatrix,
-    members: Integers,
-    weight: Quantity,
-    clock: Clock,
-) -> Judged:
-    """Long-run numbers of one closed class."""
-    case, found = ready.case, done.all
-    solver = ClassSolver(transition, members)
-    clock.stage("stationary mass")
-    events, observables = regime_numbers(
-        case,
-        ready.plan,
-        transition,
-        solver.mass,
-        found.sums,
-        solver.adjoint,
-        coarser_masses(done, members),
-        ready.centres,
-    )
-    share = outside_quantity(ready.plan, transition, solver.mass, done.has_outside, solver.adjoint)
-    clock.stage("numbers")
-    marginals = marginal_numbers(
-        case.system,
-        ready.plan,
-        transition,
-        found.slots,
-        solver.mass,
-        solver.response,
-        scattered_slots,
-        generator(case.seed, "signs"),
-    )
-    clock.stage("marginals")
-    inside = members[members < len(done.keys)]
-    regime = Regime(
-        weight=weight,
-        cell=inside,
-        mass=solver.mass[inside],
-        period=period_of(found.tally, members),
-        residual=solver.residual,
-        eigenvalue=solver.eigenvalue,
-        events=events,
-        observables=observables,
-        marginals=marginals,
-    )
-    apart = 0.0
-    if len(inside) < len(members):
-        parts = parts_without(found.tally, members, solver.mass, len(done.keys))
-        apart = float(parts[1]) if len(parts) > 1 else 0.0
-    return Judged(regime, share, solver.rough, apart)
-
-
-def coarser_masses(done: Sampled, members: Integers) -> Floats:
-    """Stationary mass of a class, (2, n_cell), with cells of twice and four times the width, from the same bursts.
-
-    Shape (0, n_cell) for a class of fewer than 8 cells: there is nothing to lump.
-    """
-    n = done.all.tally.n_cell
-    if len(members) < 8:
-        return np.zeros((0, n))
-    lifted = np.zeros((2, n))
-    for level, factor in enumerate((2, 4)):
-        coarse = lumped(done.all.tally, members, done.grid, done.keys, factor)
-        solver = ClassSolver(TransitionMatrix(coarse.tally), np.arange(coarse.tally.n_cell))
-        lifted[level, members] = coarse.lifted(solver.mass)
-    return lifted
 
 
 def versions() -> dict[str, str]:

@@ -66,8 +66,8 @@ def boxes(case: CaseRecord, grid: BoxGrid, ends: tuple[Floats, Floats], size: in
     return Boxes(grid, seed_words(case.seed, "bursts"), base, np.stack(ends, axis=1))
 
 
-def prepare(case: CaseRecord, progress: Progress, clock: Clock) -> Prepared:
-    """Compile, fly the pilot, plan."""
+def prepare(case: CaseRecord, progress: Progress, clock: Clock, effort: float = 1.0) -> Prepared:
+    """Compile, fly the pilot, plan; with less `effort` than 1, fewer bursts and coarser cells."""
     progress("compile", 0, 1)
     advance, n_sum = kernel_for(case)
     clock.stage("compile")
@@ -84,7 +84,9 @@ def prepare(case: CaseRecord, progress: Progress, clock: Clock) -> Prepared:
             f"{case.source_name}, [cells] component {worst!r}: the end that was given lies beyond the states of the "
             "pilot run; give both lower and upper, or neither"
         )
-    counts, why = boxes_per_axis(case.system, case.cells, pilot)
+    counts, why = boxes_per_axis(
+        case.system, case.cells, pilot, reseeded=case.bursts.reseed is not False, coarse=effort < 1.0
+    )
     grid = make_grid(case, ends, counts)
     found = {} if ends.given.all() else {"domain": "range of the pilot run; the cover grows by arrivals"}
     if (ends.closed & ~ends.given).any():
@@ -97,7 +99,7 @@ def prepare(case: CaseRecord, progress: Progress, clock: Clock) -> Prepared:
             f"{case.source_name}, [cells] lower, upper: no state of the pilot run lies inside; the long run covers "
             f"{span(case, pilot.points)}; widen the domain or leave it out"
         )
-    made = make_plan(case, pilot, flight, scheme_of(case), grid, ends, visited, found)
+    made = make_plan(case, pilot, flight, scheme_of(case), grid, ends, visited, found, effort)
     clock.stage("pilot")
     return Prepared(case, advance, n_sum, made, centres_of(case, flight, pilot))
 

@@ -12,13 +12,13 @@ from perdure._kernels.rows import BLOWN
 from perdure._partition import Cover, hull, tightened
 from perdure._pipeline.prepare import Prepared
 from perdure._pipeline.watch import Progress
-from perdure._records import BoxGrid, Exits, Integers
+from perdure._records import BoxGrid, Exits, Integers, Plan
 from perdure._sampling import BurstSampler, bursts_per_cell, outside_row
 from perdure._spectrum import Classes, ClassSolver, closed_classes
 from perdure._streams import generator
 from perdure._transitions import Collected, RowStore, TransitionMatrix, with_outside, without
 
-__all__ = ["Sampled", "sample", "sample_all"]
+__all__ = ["Sampled", "cover_limit", "sample", "sample_all", "sampler_of"]
 
 # The cover grows to so many times the cells of the pilot; what goes further is the outside state. It stops too
 # beyond so many steps, and the boxes between regimes are filled in up to so many.
@@ -49,12 +49,15 @@ def sampler_of(ready: Prepared) -> BurstSampler:
     return BurstSampler(ready.advance, ready.cells, ready.plan, ready.parameters, ready.n_sum, n_interval)
 
 
+def cover_limit(made: Plan) -> int:
+    """Most cells that the cover grows to."""
+    return int(min(GROWTH * int(made.pilot["cells_expected"]) + 4096, float(np.prod(made.grid.counts.astype(float)))))
+
+
 def sample(ready: Prepared, workers: int, progress: Progress) -> Sampled:
     """Send bursts from the cover, add the cells they reach, until it is closed."""
     made, sampler = ready.plan, sampler_of(ready)
-    cover = Cover(
-        int(min(GROWTH * int(made.pilot["cells_expected"]) + 4096, float(np.prod(made.grid.counts.astype(float)))))
-    )
+    cover = Cover(cover_limit(made))
     store = RowStore(made.n_replicate)
     frontier, waves, used = cover.add(made.seed_keys), 0, 0
     while len(frontier) and (waves == 0 or (used + len(frontier)) * made.per_cell * made.n_step < MOST_STEPS):
@@ -105,7 +108,12 @@ def doomed(transition: TransitionMatrix, grown: NDArray[np.bool_]) -> NDArray[np
 
 
 def follow_outside(ready: Prepared, done: Sampled, progress: Progress) -> Sampled:
-    """Give the outside state a row, if bursts left the cover: its particles weighted by the solves before."""
+    """Give the outside state a row, if bursts left the cover: its particles weighted by the solves before.
+
+    Where outside is only what the cover has no room for, and reseeded bursts will follow states there as anywhere
+    else, a rough row does for their start.
+    """
+    brief = ready.case.bursts.reseed is not False and not ready.plan.bounded
     tally, n = done.all.tally, len(done.keys)
     leaving = np.unique(np.searchsorted(tally.pointer, np.flatnonzero(tally.column == n), side="right") - 1)
     if not len(leaving):
@@ -114,15 +122,16 @@ def follow_outside(ready: Prepared, done: Sampled, progress: Progress) -> Sample
     point, origin, replicate = sampler.exits(done.lattice_keys[leaving], done.lattice_keys)
     exits = Exits(point, leaving[origin], replicate)
     weight, grown, settled = np.ones(len(origin)), done.all, True
-    for round_number in range(MOST_ROUNDS):
-        progress("outside", round_number, MOST_ROUNDS)
-        found = outside_row(sampler, exits, done.lattice_keys, weight, rng)
+    n_round = 1 if brief else MOST_ROUNDS
+    for round_number in range(n_round):
+        progress("outside", round_number, n_round)
+        found = outside_row(sampler, exits, done.lattice_keys, weight, rng, brief=brief)
         at = np.minimum(np.searchsorted(done.lattice_keys, found.row.target), n - 1)
         known = done.lattice_keys[at] == found.row.target
         column = np.where(known, at, np.where(found.row.target == BLOWN, n + 1, n))
         grown, settled = (
             with_outside(done.all, found.row, column.astype(np.int32), found.n_burst),
-            found.settled,
+            found.settled or brief,
         )
         classes = closed_classes(grown.tally)
         if not classes.members or (round_number and not settled):

@@ -2,6 +2,7 @@
 
 from perdure._records.case import (
     KINDS,
+    Budget,
     BurstOptions,
     CaseRecord,
     CellOptions,
@@ -30,11 +31,14 @@ from perdure._records.results import (
     ObservableResult,
     Quantity,
     Regime,
+    Stage,
+    Target,
 )
 
 __all__ = [
     "KINDS",
     "BoxGrid",
+    "Budget",
     "BurstOptions",
     "CaseRecord",
     "CellOptions",
@@ -54,8 +58,10 @@ __all__ = [
     "Quantity",
     "Regime",
     "SlotRows",
+    "Stage",
     "System",
     "Tally",
+    "Target",
     "Transition",
     "density_unit",
 ]

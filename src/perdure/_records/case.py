@@ -118,7 +118,11 @@ class CellOptions:
 
 @dataclass(frozen=True)
 class BurstOptions:
-    """Table ``[bursts]``. None: found by the pilot. `duration` is for flows, `steps` for maps."""
+    """Table ``[bursts]``. None: found by the pilot. `duration` is for flows, `steps` for maps.
+
+    `reseed`: true, bursts start again where earlier ones arrived; false, only uniformly in their cell; None, the
+    program's choice. `sweeps`: the number of reseeded sweeps, 1 or more.
+    """
 
     duration: float | None = None
     steps: int | None = None
@@ -128,6 +132,25 @@ class BurstOptions:
     scheme: str | None = None
     reseed: bool | None = None
     sweeps: int | None = None
+
+
+@dataclass(frozen=True)
+class Budget:
+    """What a run that is steered by its accuracy may spend. None: the program's limit.
+
+    Attributes
+    ----------
+    steps : float or None
+        Time steps (steps of a map) of all bursts together.
+    minutes : float or None
+        Time on the clock.
+    memory : float or None
+        Bytes.
+    """
+
+    steps: float | None = None
+    minutes: float | None = None
+    memory: float | None = None
 
 
 @dataclass(frozen=True)
@@ -144,6 +167,9 @@ class CaseRecord:
 
     Attributes
     ----------
+    accuracy : float or None
+        Between 0 and 1: bursts are sent until the 95 percent interval of every event share and return period has a
+        half-width below `accuracy` times its value. None: standard effort, nothing is steered.
     text : str
         The case file, verbatim (an equivalent TOML text for a case made in Python).
     source_name : str
@@ -152,7 +178,7 @@ class CaseRecord:
 
     title: str
     seed: int
-    accuracy: float
+    accuracy: float | None
     caution: str
     system: System
     events: tuple[Event, ...]

@@ -119,15 +119,20 @@ class Tally:
     column : ndarray of int32, shape (n_entry,)
         Target cell; `n_cell` is outside, `n_cell + 1` blown up: states without a row. Ascending in a row. Where
         bursts left the domain and came back, the outside state has a row: it is the last cell.
-    count : ndarray of unsigned int, shape (n_entry, n_replicate)
-    bursts : ndarray of int64, shape (n_cell, n_replicate)
-        Bursts sent from each cell: the row sums.
+    count : ndarray of unsigned int or float32, shape (n_entry, n_replicate)
+        Under reseeding, weights in units of bursts: float32.
+    bursts : ndarray of int64 or float64, shape (n_cell, n_replicate)
+        Bursts sent from each cell: the row sums. Under reseeding, their weight in units of bursts: float64.
+    together : bool
+        False: rows are independent of each other, and the replicates of a row too. True, for reseeded bursts: a
+        replicate is a whole ensemble, independent of the other replicates only.
     """
 
     pointer: Integers
     column: NDArray[np.int32]
     count: NDArray[Any]
-    bursts: Integers
+    bursts: NDArray[Any]
+    together: bool = False
 
     @property
     def n_cell(self) -> int:
@@ -189,8 +194,8 @@ class Transition(Protocol):
         """P @ values, shape (n_cell,) or (n_cell, k)."""
         ...
 
-    def replicate_right(self, values: Floats, begin: int, end: int) -> Floats:
-        """Mean of values (n_cell, k) where bursts ended, by cell and replicate: (end - begin, n_replicate, k)."""
+    def replicate_sums(self, values: Floats, begin: int, end: int) -> Floats:
+        """Sum of values (n_cell, k) where bursts ended, by cell and replicate: (end - begin, n_replicate, k)."""
         ...
 
     def scatter(self, weight: Floats, begin: int, out: Floats) -> None:

@@ -71,8 +71,10 @@ class ObservableResult:
 class Marginal:
     """Histogram of one state component along the bursts.
 
-    `edges` has shape (n + 1,), unit of the component; `mass` and `error` (standard error) have shape (n,), no
-    unit; `below` and `above` are the masses beyond the two ends.
+    `edges` has shape (n + 1,), unit of the component; `mass` and `error` (total standard error) have shape (n,), no
+    unit; `below` and `above` are the masses beyond the two ends. `parts` holds the standard error of every interval by
+    part of the error budget ("sampling", "cells", "step"), `low` and `high` the 95 percent interval of every mass:
+    each of shape (n,), no unit; None where it was not worked out.
     """
 
     edges: Floats
@@ -81,6 +83,9 @@ class Marginal:
     below: float
     above: float
     unit: str = "1"
+    parts: Mapping[str, Floats] = field(default_factory=dict)
+    low: Floats | None = None
+    high: Floats | None = None
 
 
 @dataclass(frozen=True)
@@ -115,6 +120,56 @@ class Regime:
 
 
 @dataclass(frozen=True)
+class Stage:
+    """Where bursts went: one stage of the run.
+
+    Attributes
+    ----------
+    name : str
+        "pilot", "cover", "burn-in", "reseeded", "half step", ...
+    sweeps, bursts, steps : int
+        Passes over the cells, bursts sent and time steps taken in them.
+    seconds : float
+        Time on the clock.
+    """
+
+    name: str
+    sweeps: int
+    bursts: int
+    steps: int
+    seconds: float
+
+
+@dataclass(frozen=True)
+class Target:
+    """An accuracy that was asked for, and what was reached.
+
+    Attributes
+    ----------
+    event : str
+    number : str
+        "share" or "return_period".
+    wanted : float
+        Largest half-width of the 95 percent interval over the value. No unit, as `reached`.
+    reached : float or None
+        None where there is no value.
+    met : bool
+    reason : str
+        What limits it; empty if met.
+    uniform : float or None
+        Bursts that an even spread over the cells would need for the same sampling error, over those sent.
+    """
+
+    event: str
+    number: str
+    wanted: float
+    reached: float | None
+    met: bool
+    reason: str = ""
+    uniform: float | None = None
+
+
+@dataclass(frozen=True)
 class Estimate:
     """Everything a run found; what the density file holds.
 
@@ -143,6 +198,12 @@ class Estimate:
         Versions.
     counts : mapping of str to int
         bursts, steps, entries, blown_up, outside, waves.
+    effort : tuple of Stage
+        Where the bursts went, in the order of the run.
+    targets : tuple of Target
+        One for each number that `accuracy` asks for; empty where nothing was steered.
+    cell_bursts : ndarray of int64, shape (n_cell,), or None
+        Bursts sent from each cell of `keys`.
     """
 
     case: CaseRecord
@@ -161,3 +222,6 @@ class Estimate:
     counts: Mapping[str, int]
     command: str = ""
     created: str = ""
+    effort: tuple[Stage, ...] = ()
+    targets: tuple[Target, ...] = ()
+    cell_bursts: Integers | None = None

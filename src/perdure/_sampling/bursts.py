@@ -27,6 +27,7 @@ class Starts(Protocol):
     n_dim: int
 
     def locate(self, state: Floats, key: Integers) -> None: ...
+    def centres(self, keys: Integers) -> Floats: ...
     def fill_seeds(self, keys: Integers, first: Integers, n_replicate: int, sweep: int, state: Floats) -> None: ...
     def fill_streams(self, keys: Integers, first: Integers, sweep: int, stream: NDArray[Any]) -> None: ...
 
@@ -140,27 +141,9 @@ class BurstSampler:
 
     def fly(self, keys: Integers, first: Integers, state: Floats, sweep: int) -> BlockRows:
         """Rows of cells whose bursts start at the points of state (n_dim, n_burst), which is overwritten."""
-        plan, n_dim = self.plan, self.cells.n_dim
-        n_box, n_rep = len(keys), plan.n_replicate
+        n_box, n_rep = len(keys), self.plan.n_replicate
         n_burst = int(first[-1])
-        stream = np.empty(n_burst, dtype=np.uint64)
-        self.cells.fill_streams(keys, first, sweep, stream)
-        sums = np.empty((self.n_sum, n_burst))
-        n_slot = self.n_interval + 2
-        slots = np.zeros((plan.n_step // plan.stride, n_dim, n_burst), dtype=np.uint16)
-        n_blown = self.advance(
-            state,
-            sums,
-            slots,
-            stream,
-            self.parameters,
-            plan.step,
-            plan.n_step,
-            plan.stride,
-            plan.axis_lower,
-            self.axis_scale,
-            float(n_slot),
-        )
+        sums, slots, n_blown = self.flown(keys, first, state, sweep)
         key, code = np.empty(n_burst, dtype=np.int64), np.empty(n_burst, dtype=np.int64)
         self.cells.locate(state, key)
         pointer = np.empty(n_box + 1, dtype=np.int64)
@@ -175,8 +158,36 @@ class BurstSampler:
             shortest(count[:n_entry]),
             totals,
             *self.slot_rows(slots, first),
-            int(n_blown),
+            n_blown,
         )
+
+    def flown(
+        self, keys: Integers, first: Integers, state: Floats, sweep: int
+    ) -> tuple[Floats, NDArray[np.uint16], int]:
+        """Fly bursts from the points of state (n_dim, n_burst), which are overwritten by their ends.
+
+        Cell i, of key keys[i], owns bursts first[i] to first[i + 1]. Returns sums (n_sum, n_burst), slots
+        (n_sample, n_dim, n_burst) and how many blew up.
+        """
+        plan, n_burst = self.plan, int(first[-1])
+        stream = np.empty(n_burst, dtype=np.uint64)
+        self.cells.fill_streams(keys, first, sweep, stream)
+        sums = np.empty((self.n_sum, n_burst))
+        slots = np.zeros((plan.n_step // plan.stride, self.cells.n_dim, n_burst), dtype=np.uint16)
+        n_blown = self.advance(
+            state,
+            sums,
+            slots,
+            stream,
+            self.parameters,
+            plan.step,
+            plan.n_step,
+            plan.stride,
+            plan.axis_lower,
+            self.axis_scale,
+            float(self.n_interval + 2),
+        )
+        return sums, slots, int(n_blown)
 
     def exits(self, keys: Integers, known: Integers, *, sweep: int = 0) -> tuple[Floats, Integers, Integers]:
         """Where bursts of the cells `keys` ended that did not end in a cell of `known` (ascending) or blew up.

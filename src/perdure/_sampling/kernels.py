@@ -28,7 +28,7 @@ def parameter_values(case: CaseRecord, centres: Floats | None = None) -> Floats:
     return joined if len(joined) else np.zeros(1)
 
 
-def kernel_spec(case: CaseRecord) -> KernelSpec:
+def kernel_spec(case: CaseRecord, *, halved: bool = False) -> KernelSpec:
     system, lower, upper = case.system, case.cells.lower, case.cells.upper
     return KernelSpec(
         scheme=scheme_of(case),
@@ -42,18 +42,21 @@ def kernel_spec(case: CaseRecord) -> KernelSpec:
         periodic=tuple((s, lower[s], upper[s] - lower[s]) for s in case.cells.periodic),
         function=system.function,
         noise_function=system.noise_function,
+        halved=halved,
     )
 
 
-def kernel_for(case: CaseRecord) -> tuple[Callable[..., int], int]:
-    """The compiled kernel, and the number of its sums.
+def kernel_for(case: CaseRecord, halved: bool = False) -> tuple[Callable[..., int], int]:
+    """The compiled kernel, and the number of its sums; if `halved`, of steps of half the length on the same noise.
 
     Raises
     ------
     CaseError
         A Python function that numba cannot compile.
+    ValueError
+        A map is to be halved.
     """
-    spec = kernel_spec(case)
+    spec = kernel_spec(case, halved=halved)
     try:
         return burst_kernel(spec), spec.n_sum
     except TypeError as error:

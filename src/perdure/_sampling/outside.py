@@ -47,9 +47,18 @@ class OutsideRow:
 
 
 def outside_row(
-    sampler: BurstSampler, exits: Exits, known: Integers, weight: Floats, rng: np.random.Generator
+    sampler: BurstSampler,
+    exits: Exits,
+    known: Integers,
+    weight: Floats,
+    rng: np.random.Generator,
+    *,
+    brief: bool = False,
 ) -> OutsideRow:
-    """Fly the particles; weight (n_exit,) is the mass that each exit stands for, `known` the keys of the cover."""
+    """Fly the particles; weight (n_exit,) is the mass that each exit stands for, `known` the keys of the cover.
+
+    If `brief`, the fewest sweeps do, settled or not.
+    """
     n_rep = sampler.plan.n_replicate
     size = PARTICLES // n_rep
     key, first = np.array([OUTSIDE]), np.array([0, size * n_rep], dtype=np.int64)
@@ -68,6 +77,8 @@ def outside_row(
         staying = [point[:, burst // size == r] for r in range(n_rep)]
         stay.append(len(burst) / (size * n_rep))
         rows.append(block)
+        if len(rows) == KEPT + DROPPED and brief:
+            break
         if len(rows) == KEPT + DROPPED:
             rows, stay = rows[DROPPED:], stay[DROPPED:]
             long_enough = (sweep + 1) * (1.0 - float(np.mean(stay))) >= STAYS

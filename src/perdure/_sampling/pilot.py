@@ -66,13 +66,14 @@ class Pilot:
 
 
 class Flight:
-    """Calls the burst kernel on plain trajectories, without tallies."""
+    """Calls the burst kernel on plain trajectories, without tallies; `steps` counts what it took."""
 
     def __init__(self, advance: Advance, parameters: Floats, n_sum: int, rng: np.random.Generator) -> None:
         self.advance = advance
         self.parameters = parameters
         self.n_sum = n_sum
         self.rng = rng
+        self.steps = 0
 
     def fly(self, state: Floats, step: float, n_step: int, stream: NDArray[np.uint64] | None = None) -> Floats:
         """States after `n_step` steps from state (n_dim, n); nan where a trajectory blew up."""
@@ -83,6 +84,7 @@ class Flight:
     ) -> tuple[Floats, Floats]:
         """The states, and the kernel's sums (n_sum, n) on the way."""
         n_dim, n = state.shape
+        self.steps += n * n_step
         out, sums = np.ascontiguousarray(state, dtype=float).copy(), np.zeros((self.n_sum, n))
         words = np.asarray(self.rng.integers(0, 2**63, n)).astype(np.uint64) if stream is None else stream
         slots = np.zeros((0, n_dim, n), dtype=np.uint16)

@@ -85,7 +85,7 @@ def factored(transition: Transition, transient: Floats, rhs: Floats, *, transpos
             f"where starts from {len(cells)} transient cells end: the iteration stopped early, and {entries} entries "
             f"are too many to factor (allowed {FACTOR_MOST}); use fewer cells or longer bursts"
         )
-    value = tally.count.sum(axis=1) / np.repeat(tally.bursts.sum(axis=1), np.diff(tally.pointer))
+    value = tally.count.sum(axis=1, dtype=float) / np.repeat(tally.bursts.sum(axis=1), np.diff(tally.pointer))
     whole = csr_array((value, tally.column, tally.pointer), shape=(n, n + 2))
     inner = eye_array(len(cells), format="csr") - whole[cells][:, cells]
     out = np.zeros_like(rhs)

@@ -12,7 +12,11 @@ from scipy.sparse.csgraph import connected_components, dijkstra
 
 from perdure._records import Floats, Integers, Tally
 
-__all__ = ["Classes", "closed_classes", "parts_without", "period_of"]
+__all__ = ["Classes", "closed_classes", "lasting", "parts_without", "period_of"]
+
+
+# Least part of the weight that a set of cells without a way back must hold to be a regime.
+STRAY = 0.01
 
 
 @dataclass(frozen=True)
@@ -55,6 +59,43 @@ def closed_classes(tally: Tally) -> Classes:
     groups = [np.sort(group) for group in np.split(order, cuts) if len(group) and not is_open[label[group[0]]]]
     groups.sort(key=lambda group: (-len(group), int(group[0])))
     return Classes(tuple(group.astype(np.int64) for group in groups), leaks)
+
+
+def lasting(pointer: Integers, place: Integers, weight: Floats) -> NDArray[np.bool_]:
+    """Rows of weighted bursts that can stand for the long run, shape (n,).
+
+    Not among them are cells that sent nothing, cells that lead nowhere else, and sets of cells without a way back that
+    hold less than `STRAY` of all weight: what the last sweeps had no time to leave.
+
+    Parameters
+    ----------
+    pointer : ndarray of int64, shape (n + 1,)
+        Compressed rows.
+    place : ndarray of int64, shape (n_entry,)
+        Row that an entry leads to; -1 where there is none.
+    weight : ndarray, shape (n_entry,)
+    """
+    n = len(pointer) - 1
+    row = np.repeat(np.arange(n), np.diff(pointer))
+    whole = np.bincount(row, weights=weight, minlength=n)
+    keep = whole > 0.0
+    while True:
+        live = (place >= 0) & (weight > 0.0) & keep[row] & keep[place]
+        a, z = row[live], place[live]
+        graph = csr_array((np.ones(len(a)), (a, z)), shape=(n, n))
+        count, label = connected_components(graph, directed=True, connection="strong")
+        is_open = np.zeros(count, dtype=bool)
+        is_open[label[a[label[a] != label[z]]]] = True
+        held = np.bincount(label, weights=whole * keep, minlength=count)
+        stray = ~is_open & (held < STRAY * whole.sum())
+        dead = keep & (np.bincount(a, minlength=n) == 0)
+        drop = dead | (keep & stray[label])
+        if np.array_equal(drop, keep):
+            # nothing but light sets is left: none of them is more of a stray than another
+            drop = dead
+        if not drop.any():
+            return keep
+        keep = keep & ~drop
 
 
 def parts_without(tally: Tally, members: Integers, mass: Floats, cell: int) -> Floats:

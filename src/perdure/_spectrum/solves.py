@@ -120,5 +120,5 @@ def class_matrix(tally: Tally, members: Integers) -> csr_array:
     at = np.arange(pointer[-1]) + np.repeat(tally.pointer[members] - pointer[:-1], lengths)
     place = np.full(tally.n_cell + 2, -1, dtype=np.int64)
     place[members] = np.arange(len(members))
-    value = tally.count[at].sum(axis=1) / np.repeat(tally.bursts[members].sum(axis=1), lengths)
+    value = tally.count[at].sum(axis=1, dtype=float) / np.repeat(tally.bursts[members].sum(axis=1), lengths)
     return csr_array((value, place[tally.column[at]], pointer), shape=(len(members), len(members)))

@@ -7,17 +7,36 @@ the sum over cells of pi_i^2 times the variance of a row mean, which the replica
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 
-from perdure._records import CaseRecord, EventResult, Floats, ObservableResult, Plan, Quantity, Transition
-from perdure._statistics.intervals import cells_part, interval, upper_bound
+from perdure._records import CaseRecord, EventResult, Floats, Integers, ObservableResult, Plan, Quantity, Transition
+from perdure._statistics.intervals import Shift, cells_part, interval, upper_bound
 
-__all__ = ["Averages", "regime_numbers"]
+__all__ = ["Averages", "allocation", "evenness", "regime_numbers", "scaled"]
 
 CHUNK = 65536
+
+
+class Found(Protocol):
+    """Sums along the bursts, (n_cell, n_replicate, n_sum) as the kernel made them, and the bursts sent, (n_cell,)."""
+
+    @property
+    def sums(self) -> Floats: ...
+    @property
+    def sent(self) -> Integers: ...
+
+
+@dataclass(frozen=True)
+class Spread:
+    """Standard error of a number from sampling, its degrees of freedom, and what other parts `Shift`s give."""
+
+    error: float
+    freedom: float
+    others: Mapping[str, float]
 
 
 @dataclass(frozen=True)
@@ -33,9 +52,9 @@ class Averages:
     effective : float
         Bursts that count, 1 / sum(mass^2 / bursts) (L. Kish's effective sample size).
     hits : ndarray, shape (n_sum,)
-        The sums over all bursts: for entries, how many were seen.
+        The sums over all bursts: for entries, about how many were seen.
     at_rest : bool
-        A single cell of a system without noise: what enters an event there is seeds that settle.
+        A single cell of a system without noise under plain bursts: what enters an event there is seeds that settle.
     """
 
     value: Floats
@@ -44,45 +63,95 @@ class Averages:
     hits: Floats
     at_rest: bool
 
-    def cells(self, number: Callable[[Floats], float]) -> float | None:
-        """Part of the error of a number from cell size; `number` makes it from the averages."""
-        if not len(self.coarser):
-            return None
-        with np.errstate(divide="ignore", invalid="ignore"):
-            return cells_part((number(self.value), number(self.coarser[0]), number(self.coarser[1])))
+    def others(self, spread: Spread, number: Callable[[Floats], float]) -> dict[str, float]:
+        """Parts of the error of a number beside sampling; `number` makes it from the averages."""
+        parts = dict(spread.others)
+        if len(self.coarser):
+            with np.errstate(divide="ignore", invalid="ignore"):
+                ladder = cells_part((number(self.value), number(self.coarser[0]), number(self.coarser[1])))
+            parts["cells"] = float(np.hypot(ladder, parts.get("cells", 0.0)))
+        return {name: parts[name] for name in ("cells", "step") if name in parts}
 
 
-def per_burst(sums: Floats, transition: Transition, plan: Plan, n_event: int) -> Floats:
-    """Mean along the bursts, shape (n_cell, n_replicate, n_sum): shares and means per step, entries per burst.
+def scaled(sums: Floats, plan: Plan, n_event: int) -> Floats:
+    """Sums along the bursts, (..., n_sum), on the scale of one burst: shares and means per step, entries per burst.
 
     The kernel sums from the second step on, unless a burst has but one.
     """
     n_summed = max(plan.n_step - 1, 1)
-    scale = np.full(sums.shape[2], 1.0 / n_summed)
+    scale = np.full(sums.shape[-1], 1.0 / n_summed)
     scale[1 : 2 * n_event : 2] = plan.n_step / n_summed
-    return np.asarray(sums * scale / transition.tally.bursts[:, :, None])
+    return np.asarray(sums * scale)
 
 
-def errors_of(transition: Transition, mass: Floats, h: Floats, means: Floats, mix: Floats) -> tuple[Floats, Floats]:
+def errors_of(transition: Transition, mass: Floats, h: Floats, sums: Floats, mix: Floats) -> tuple[Floats, Floats]:
     """Standard error and degrees of freedom, shape (n_number,), of linear mixes of the averages.
 
-    h (n_cell, n_sum) solves the adjoint equation; means (n_cell, n_replicate, n_sum); mix (n_sum, n_number).
-    Degrees of freedom by F. E. Satterthwaite, Biometrics Bull. 2 (1946) 110-114.
+    h (n_cell, n_sum) solves the adjoint equation; sums (n_cell, n_replicate, n_sum) along the bursts of each
+    replicate; mix (n_sum, n_number). The error of replicate r in row i is what its bursts found beyond the mean of
+    the row, sum_j counts_r h_j + sums_r - bursts_r (mean of both), times mass_i over the bursts of the row. Where rows
+    are independent the variances add up (degrees of freedom by F. E. Satterthwaite, Biometrics Bull. 2 (1946) 110-114);
+    of reseeded bursts only whole replicates are, and their errors are summed over the rows first.
     """
-    variance, square = np.zeros(mix.shape[1]), np.zeros(mix.shape[1])
-    n_rep = means.shape[1]
+    n_rep, n_number = transition.tally.bursts.shape[1], mix.shape[1]
+    variance, square, whole = np.zeros(n_number), np.zeros(n_number), np.zeros((n_rep, n_number))
+    for _, row in row_errors(transition, mass, h, sums, mix):
+        part = (row**2).sum(axis=1) * (n_rep / (n_rep - 1))
+        variance += part.sum(axis=0)
+        square += (part**2).sum(axis=0) / (n_rep - 1)
+        whole += row.sum(axis=0)
+    if transition.tally.together:
+        together = (whole**2).sum(axis=0) * (n_rep / (n_rep - 1))
+        return np.sqrt(together), np.full(n_number, float(n_rep - 1))
+    freedom = np.where(square > 0.0, variance**2 / np.where(square > 0.0, square, 1.0), np.inf)
+    return np.sqrt(variance), np.minimum(freedom, 1e9)
+
+
+def row_errors(
+    transition: Transition, mass: Floats, h: Floats, sums: Floats, mix: Floats
+) -> Iterator[tuple[int, Floats]]:
+    """First row and errors, shape (n, n_replicate, n_number), of one chunk of rows after the other; see `errors_of`."""
     mixed = h @ mix
     for begin in range(0, len(mass), CHUNK):
         end = min(begin + CHUNK, len(mass))
         if not mass[begin:end].any():
             continue
-        row = transition.replicate_right(mixed, begin, end) + means[begin:end] @ mix
-        row = row - row.mean(axis=1, keepdims=True)
-        part = mass[begin:end, None] ** 2 * (row**2).sum(axis=1) / (n_rep * (n_rep - 1))
-        variance += part.sum(axis=0)
-        square += (part**2).sum(axis=0) / (n_rep - 1)
-    freedom = np.where(square > 0.0, variance**2 / np.where(square > 0.0, square, 1.0), np.inf)
-    return np.sqrt(variance), np.minimum(freedom, 1e9)
+        row = transition.replicate_sums(mixed, begin, end) + sums[begin:end] @ mix
+        bursts = transition.tally.bursts[begin:end]
+        total = bursts.sum(axis=1)
+        row -= row.sum(axis=1, keepdims=True) * (bursts / total[:, None])[:, :, None]
+        yield begin, row * (mass[begin:end] / total)[:, None, None]
+
+
+def allocation(
+    case: CaseRecord,
+    plan: Plan,
+    transition: Transition,
+    mass: Floats,
+    found: Found,
+    adjoint: Callable[[Floats], Floats],
+    wanted: Mapping[tuple[str, int], float] | None = None,
+) -> Floats:
+    """Where bursts are worth most: share of the bursts for every cell, shape (n_cell,), sum one.
+
+    J. Neyman's allocation (J. Roy. Statist. Soc. 97 (1934) 558-625): in proportion to the standard deviation of what
+    one burst of the cell adds to the error, here of several numbers together, each relative to its variance, times
+    its weight in `wanted` (all alike without it). Half goes by mass: against chance in
+    the deviations, and because cells know the adjoint solution on their average only.
+    """
+    sums, averages, h = averaged(case, plan, transition, mass, found, adjoint, np.zeros((0, len(mass))))
+    mix, names = mixes(case, plan, averages)
+    per_burst = np.zeros((len(mass), mix.shape[1]))
+    with np.errstate(over="ignore", invalid="ignore"):
+        for begin, row in row_errors(transition, mass, h, sums, mix):
+            per_burst[begin : begin + len(row)] = (row**2).sum(axis=1)
+    per_burst *= found.sent[:, None]
+    total = per_burst.sum(axis=0)
+    weight = np.array([1.0 if wanted is None else wanted.get(name, 0.0) for name in names])
+    fine = np.isfinite(total) & (total > 0.0) & (weight > 0.0)
+    score = np.sqrt(per_burst[:, fine] @ (weight[fine] / total[fine]))
+    by_mass = mass / mass.sum()
+    return np.asarray(0.5 * score / score.sum() + 0.5 * by_mass if score.any() else by_mass)
 
 
 def regime_numbers(
@@ -90,10 +159,11 @@ def regime_numbers(
     plan: Plan,
     transition: Transition,
     mass: Floats,
-    sums: Floats,
+    found: Found,
     adjoint: Callable[[Floats], Floats],
     lifted: Floats,
     centres: Floats,
+    shifts: Mapping[str, Shift],
 ) -> tuple[Mapping[str, EventResult], Mapping[str, ObservableResult]]:
     """All named numbers of one regime.
 
@@ -101,42 +171,78 @@ def regime_numbers(
     ----------
     mass : ndarray, shape (n_cell,)
         Stationary mass, zero off the regime.
-    sums : ndarray, shape (n_cell, n_replicate, n_sum)
-        Sums along the bursts, as the kernel made them.
     adjoint : callable
         Solves (I - P) h = g - mu(g) for columns g.
     lifted : ndarray, shape (2, n_cell)
         Stationary mass with cells of twice and four times the width; shape (0, n_cell) where that is not known.
     centres : ndarray, shape (n_observable,)
         What the kernel took off each observable before summing.
+    shifts : mapping of str to Shift
+        By the part of the budget ("cells", "step") that they belong to.
     """
-    n_event = len(case.events)
-    means = per_burst(sums, transition, plan, n_event)
-    weight = transition.tally.bursts / transition.tally.bursts.sum(axis=1, keepdims=True)
-    pooled = np.einsum("irg,ir->ig", means, weight)
-    held = np.where(mass[:, None] > 0.0, pooled, 0.0)
-    value = mass @ held
-    averages = Averages(
-        value,
-        lifted @ held,
-        1.0 / float(np.sum(mass**2 / transition.tally.bursts.sum(axis=1))),
-        sums[mass > 0.0].sum(axis=(0, 1)),
-        int(np.sum(mass > 0.0)) == 1 and not case.system.is_noisy,
-    )
-    fine = np.isfinite(value)
-    h = np.zeros_like(pooled)
-    if fine.any():
-        h[:, fine] = adjoint(np.where(np.isfinite(pooled[:, fine]), pooled[:, fine], 0.0))
+    sums, averages, h = averaged(case, plan, transition, mass, found, adjoint, lifted)
     mix, names = mixes(case, plan, averages)
-    safe = np.where(np.isfinite(means), means, 0.0)
     with np.errstate(over="ignore", invalid="ignore"):
-        error, freedom = errors_of(transition, mass, h, safe, mix)
-    at = {name: (float(error[k]), float(freedom[k])) for k, name in enumerate(names)}
+        error, freedom = errors_of(transition, mass, h, sums, mix)
+        others = {part: shift.part(mix) for part, shift in shifts.items()}
+    at = {
+        name: Spread(float(error[k]), float(freedom[k]), {part: float(v[k]) for part, v in others.items()})
+        for k, name in enumerate(names)
+    }
     events = {e.name: event_result(case, plan, averages, k, at) for k, e in enumerate(case.events)}
     observables = {
         o.name: observable_result(case, averages, k, at, float(centres[k])) for k, o in enumerate(case.observables)
     }
     return events, observables
+
+
+def evenness(
+    case: CaseRecord,
+    plan: Plan,
+    transition: Transition,
+    mass: Floats,
+    found: Found,
+    adjoint: Callable[[Floats], Floats],
+) -> dict[tuple[str, int], float]:
+    """Variance of every number if the same bursts were spread evenly over the cells, over that with the bursts sent."""
+    sums, averages, h = averaged(case, plan, transition, mass, found, adjoint, np.zeros((0, len(mass))))
+    mix, names = mixes(case, plan, averages)
+    sent, even = np.zeros(mix.shape[1]), np.zeros(mix.shape[1])
+    mean = found.sent[mass > 0.0].mean()
+    with np.errstate(over="ignore", invalid="ignore"):
+        for begin, row in row_errors(transition, mass, h, sums, mix):
+            part = (row**2).sum(axis=1)
+            sent += part.sum(axis=0)
+            even += (part * found.sent[begin : begin + len(row), None]).sum(axis=0) / mean
+    return {name: float(even[k] / sent[k]) for k, name in enumerate(names) if sent[k] > 0.0}
+
+
+def averaged(
+    case: CaseRecord,
+    plan: Plan,
+    transition: Transition,
+    mass: Floats,
+    found: Found,
+    adjoint: Callable[[Floats], Floats],
+    lifted: Floats,
+) -> tuple[Floats, Averages, Floats]:
+    """Sums on the scale of a burst, zero where they are not finite; the averages; their adjoint solutions."""
+    sums, whole = scaled(found.sums, plan, len(case.events)), transition.tally.bursts.sum(axis=1)[:, None]
+    pooled = sums.sum(axis=1) / whole
+    held = np.where(mass[:, None] > 0.0, pooled, 0.0)
+    value = mass @ held
+    averages = Averages(
+        value,
+        lifted @ held,
+        1.0 / float(np.sum(mass**2 / found.sent)),
+        found.sent.astype(float) @ np.where(mass[:, None] > 0.0, found.sums.sum(axis=1) / whole, 0.0),
+        int(np.sum(mass > 0.0)) == 1 and not case.system.is_noisy and not transition.tally.together,
+    )
+    fine = np.isfinite(value)
+    h = np.zeros_like(pooled)
+    if fine.any():
+        h[:, fine] = adjoint(np.where(np.isfinite(pooled[:, fine]), pooled[:, fine], 0.0))
+    return np.where(np.isfinite(sums), sums, 0.0), averages, h
 
 
 def mixes(case: CaseRecord, plan: Plan, averages: Averages) -> tuple[Floats, list[tuple[str, int]]]:
@@ -170,7 +276,7 @@ def event_result(
     plan: Plan,
     averages: Averages,
     k: int,
-    at: Mapping[tuple[str, int], tuple[float, float]],
+    at: Mapping[tuple[str, int], Spread],
 ) -> EventResult:
     """Share, entry rate, return period and mean spell of event `k`."""
     share, entries = float(averages.value[2 * k]), float(averages.value[2 * k + 1])
@@ -183,7 +289,9 @@ def event_result(
     elif share > 1.0 - 1e-12:
         quantity = Quantity(1.0, 1.0 - bound, 1.0, {"sampling": 0.0}, "1", f"always seen {seen}: lower bound")
     else:
-        quantity = interval(share, *at["share", k], "1", "share", averages.cells(lambda v: v[2 * k]))
+        spread = at["share", k]
+        others = averages.others(spread, lambda v: v[2 * k])
+        quantity = interval(share, spread.error, spread.freedom, "1", "share", others)
     refusal = why_no_rate(case, k)
     if averages.at_rest and not refusal:
         refusal = "the regime is a single cell: entries would be those of seeds that settle in it"
@@ -200,8 +308,9 @@ def event_result(
         return EventResult(quantity, rate, period, none)
 
     def number(name: str, value: float, unit: str, of: Callable[[Floats], float]) -> Quantity:
-        error, freedom = at[name, k]
-        return interval(value, counted(error, value, hits), freedom, unit, "positive", averages.cells(of))
+        spread = at[name, k]
+        error = counted(spread.error, value, hits)
+        return interval(value, error, spread.freedom, unit, "positive", averages.others(spread, of))
 
     hits = float(averages.hits[2 * k + 1])
     return EventResult(
@@ -246,21 +355,20 @@ def is_zero(text: str) -> bool:
 
 
 def observable_result(
-    case: CaseRecord, averages: Averages, k: int, at: Mapping[tuple[str, int], tuple[float, float]], centre: float
+    case: CaseRecord, averages: Averages, k: int, at: Mapping[tuple[str, int], Spread], centre: float
 ) -> ObservableResult:
     """Mean and variance of observable `k`, whose sums were taken about `centre`."""
     first = 2 * len(case.events) + 2 * k
     mean, square = float(averages.value[first]), float(averages.value[first + 1])
     unit = case.observables[k].unit
     square_unit = unit if unit == "1" else f"({unit})^2"
-    spread = max(square - mean * mean, 0.0)
+
+    def number(name: str, value: float, unit: str, kind: str, of: Callable[[Floats], float]) -> Quantity:
+        spread = at[name, k]
+        return interval(value, spread.error, spread.freedom, unit, kind, averages.others(spread, of))
+
+    spread = max(square - mean * mean, 0.0) if np.isfinite(square) else np.nan
     return ObservableResult(
-        interval(centre + mean, *at["mean", k], unit, "real", averages.cells(lambda v: v[first])),
-        interval(
-            spread if np.isfinite(square) else np.nan,
-            *at["variance", k],
-            square_unit,
-            "positive",
-            averages.cells(lambda v: v[first + 1] - v[first] ** 2),
-        ),
+        number("mean", centre + mean, unit, "real", lambda v: v[first]),
+        number("variance", spread, square_unit, "positive", lambda v: v[first + 1] - v[first] ** 2),
     )

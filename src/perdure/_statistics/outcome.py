@@ -18,6 +18,8 @@ __all__ = ["Findings", "no_share", "outcome_of", "outside_quantity", "regime_wei
 PILOT_LEAST = 0.9
 # Most mass that may be linked with the rest of a regime through the outside state alone.
 APART_MOST = 0.01
+# Most weight of reseeded bursts that may be set aside.
+STRAYED_MOST = 0.001
 
 Visits = Callable[[Transition, tuple[Integers, ...], Floats], Floats]
 
@@ -46,9 +48,14 @@ def no_share() -> Quantity:
 
 
 def outside_quantity(
-    plan: Plan, transition: Transition, mass: Floats, has_outside: bool, adjoint: Callable[[Floats], Floats]
+    plan: Plan,
+    transition: Transition,
+    mass: Floats,
+    sent: Integers,
+    has_outside: bool,
+    adjoint: Callable[[Floats], Floats],
 ) -> Quantity:
-    """Share of time outside the domain in a regime; an upper bound where no burst left."""
+    """Share of time outside the domain in a regime; an upper bound, by the bursts sent (n_cell,), where none left."""
     bursts = transition.tally.bursts
     if has_outside and mass[-1] > 1e-12:
         is_outside = np.zeros((len(mass), 1))
@@ -58,7 +65,7 @@ def outside_quantity(
         return interval(float(mass[-1]), float(error[0]), float(freedom[0]), "1", "share")
     if not plan.bounded:
         return Quantity(0.0, 0.0, 0.0, {"sampling": 0.0}, "1")
-    effective = 1.0 / float(np.sum(mass**2 / bursts.sum(axis=1)))
+    effective = 1.0 / float(np.sum(mass**2 / sent))
     return Quantity(0.0, 0.0, upper_bound(effective), {"sampling": 0.0}, "1")
 
 
@@ -78,6 +85,10 @@ class Findings:
         Stays outside the cover stopped lengthening.
     pilot_share : float
         Part of the pilot's points in the cells of the regimes.
+    drifts : bool
+        Averages over reseeded bursts still changed from sweep to sweep at the end.
+    strayed : float
+        Part of their weight that ended in cells which it did not leave again, and was set aside.
     """
 
     plan: Plan
@@ -88,6 +99,8 @@ class Findings:
     apart: float
     settled: bool
     pilot_share: float
+    drifts: bool = False
+    strayed: float = 0.0
 
 
 def outcome_of(case: CaseRecord, found: Findings) -> tuple[str, tuple[str, ...], bool]:
@@ -114,6 +127,17 @@ def outcome_of(case: CaseRecord, found: Findings) -> tuple[str, tuple[str, ...],
             "stays outside the domain still lengthened from sweep to sweep, so that shares have not settled; widen "
             "[cells] lower, upper; if that does not help, the system may have no long-run density at all"
         )
+    if found.drifts:
+        messages.append(
+            "averages over the reseeded bursts still drifted beyond chance when their budget was spent: the start is "
+            "forgotten slowly, perhaps like a power of time, and errors are too small; give more [bursts] sweeps or "
+            "longer bursts, and see whether the numbers move"
+        )
+    if found.strayed > STRAYED_MOST:
+        messages.append(
+            f"{found.strayed:.2g} of the weight of the reseeded bursts ended in cells that it did not leave again, and "
+            "was set aside; it may be a regime of its own: give more [bursts] sweeps"
+        )
     held = sum(regime.weight.value or 0.0 for regime in regimes)
     if not regimes or held < 0.5:
         messages.append(
@@ -137,6 +161,8 @@ def outcome_of(case: CaseRecord, found: Findings) -> tuple[str, tuple[str, ...],
         )
     passed = (
         found.settled
+        and not found.drifts
+        and found.strayed <= STRAYED_MOST
         and not found.rough
         and found.apart <= APART_MOST
         and found.pilot_share >= PILOT_LEAST
@@ -170,7 +196,7 @@ def regime_messages(case: CaseRecord, plan: Plan, regime: Regime, number: int) -
         )
     if len(regime.cell) == 1:
         lines.append(
-            f"regime {number} is a single cell: a fixed point, or a motion smaller than a cell; its density is a point "
-            "mass as far as the cells can tell, and its numbers are those of bursts that settle into it"
+            f"regime {number} is a single cell: a fixed point, or a motion smaller than a cell; its density is as "
+            "coarse as the cell; without reseeding its numbers are those of bursts that settle into it"
         )
     return lines

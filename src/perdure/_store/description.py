@@ -61,12 +61,12 @@ def number(value: float | str | None) -> float:
 
 
 def case_to_json(case: CaseRecord) -> str:
-    """All of a case but its text, seed and compiled parts."""
+    """All of a case but its text, seed and compiled parts; without `accuracy` where none is asked for."""
     system = case.system
     return to_json(
         {
             "title": case.title,
-            "accuracy": case.accuracy,
+            **({} if case.accuracy is None else {"accuracy": case.accuracy}),
             "caution": case.caution,
             "source_name": case.source_name,
             "system": {
@@ -106,7 +106,7 @@ def case_from_json(described: str, *, text: str, seed: str) -> CaseRecord:
     return CaseRecord(
         title=data["title"],
         seed=int(seed),
-        accuracy=number(data["accuracy"]),
+        accuracy=number(data["accuracy"]) if "accuracy" in data else None,
         caution=data["caution"],
         system=System(
             kind=system["kind"],

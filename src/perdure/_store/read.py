@@ -24,12 +24,14 @@ from perdure._records import (
     Plan,
     Quantity,
     Regime,
+    Stage,
     Tally,
+    Target,
 )
 from perdure._store.description import case_from_json, from_json, plan_from_json
 from perdure._store.opening import check_root, opened, plain_attribute, reason_of
 from perdure._store.sections import EVENT_COLUMNS, OBSERVABLE_COLUMNS
-from perdure._store.tables import read_quantities, texts
+from perdure._store.tables import floats, optional, part_columns, read_quantities, texts
 from perdure.errors import DensityFileError
 
 __all__ = ["StoredEstimate", "load", "open_file"]
@@ -168,21 +170,26 @@ class StoredEstimate:
 
     @cached_property
     def basins(self) -> NDArray[np.float32] | None:
-        with self._reading("/cells"):
-            present = "basin" in self._group("cells")
-        return self._array("cells/basin", np.float32) if present else None
+        return self._array("cells/basin", np.float32) if self._holds("basin", "cells") else None
 
     @cached_property
     def tally(self) -> Tally | None:
+        if not self._holds("matrix"):
+            return None
         with self._reading("/matrix"):
-            if "matrix" not in self._group():
-                return None
+            together = bool(self._group("matrix").attrs.get("together", False))
         return Tally(
             self._array("matrix/pointer", np.int64),
             self._array("matrix/column", np.int32),
             self._array("matrix/count", None),
-            self._array("matrix/bursts", np.int64),
+            self._array("matrix/bursts", None),
+            together,
         )
+
+    @cached_property
+    def cell_bursts(self) -> Integers | None:
+        """Bursts sent from each cell; None where they were not counted."""
+        return self._array("cells/bursts", np.int64) if self._holds("bursts", "cells") else None
 
     # ----------------------------------------------------------------------------------- regimes
 
@@ -250,6 +257,33 @@ class StoredEstimate:
             for k in range(self.n_regime)
         )
 
+    # ------------------------------------------------------------------------------------ effort
+
+    @cached_property
+    def effort(self) -> tuple[Stage, ...]:
+        """Where the bursts went, by stage; empty in files that do not tell."""
+        if not self._holds("effort"):
+            return ()
+        with self._reading("/effort"):
+            group = self._group("effort")
+            counted = zip(*(group[name][()].tolist() for name in ("sweeps", "bursts", "steps", "seconds")), strict=True)
+            return tuple(Stage(name, *row) for name, row in zip(texts(group, "stage"), counted, strict=True))
+
+    @cached_property
+    def targets(self) -> tuple[Target, ...]:
+        """Accuracies asked for and reached; empty where nothing was steered."""
+        if not self._holds("targets"):
+            return ()
+        with self._reading("/targets"):
+            group = self._group("targets")
+            wanted, reached = floats(group, "wanted"), floats(group, "reached")
+            met = group["met"][()]
+            events, columns, reasons = (texts(group, name) for name in ("event", "number", "reason"))
+            return tuple(
+                Target(event, columns[i], float(wanted[i]), optional(reached[i]), bool(met[i]), reasons[i])
+                for i, event in enumerate(events)
+            )
+
     def estimate(self) -> Estimate:
         """All of it, in memory."""
         names = Estimate.__dataclass_fields__
@@ -261,6 +295,11 @@ class StoredEstimate:
         if not self._file:
             raise DensityFileError(f"{self._label}: this density file was closed; open it again to read more of it")
         return self._file[name]
+
+    def _holds(self, name: str, group: str = "/") -> bool:
+        """Whether a part that not every file has is there."""
+        with self._reading(group if group == "/" else f"/{group}"):
+            return name in self._group(group)
 
     def _array(self, name: str, dtype: Any) -> NDArray[Any]:
         with self._reading(f"/{name}"):
@@ -309,6 +348,8 @@ def place(regime: int) -> str:
 def read_marginal(group: h5py.Group, name: str) -> Marginal:
     (axis,) = (v for v in group if "bounds" in group[v].attrs)
     bounds = group[group[axis].attrs["bounds"]][()]
+    beside = str(group["mass"].attrs["ancillary_variables"]).split(" ")
+    low, high = (group[end][()] if end in beside else None for end in ("mass_low", "mass_high"))
     return Marginal(
         edges=np.append(bounds[:, 0], bounds[-1:, 1]),
         mass=group["mass"][()],
@@ -316,4 +357,7 @@ def read_marginal(group: h5py.Group, name: str) -> Marginal:
         below=float(group.attrs["below"]),
         above=float(group.attrs["above"]),
         unit=str(group[axis].attrs["units"]),
+        parts=part_columns(group, beside),
+        low=low,
+        high=high,
     )

@@ -18,13 +18,15 @@ from perdure._records import (
     ObservableResult,
     Quantity,
     Regime,
+    Stage,
     System,
     Tally,
+    Target,
     density_unit,
 )
 from perdure._store.description import to_json
 from perdure._store.layout import attrs, bare_dim, free_names, group, put, put_text
-from perdure._store.tables import part_names, put_quantities
+from perdure._store.tables import part_names, part_variables, put_quantities
 
 __all__ = [
     "EVENT_COLUMNS",
@@ -32,12 +34,14 @@ __all__ = [
     "put_budget",
     "put_cells",
     "put_density",
+    "put_effort",
     "put_events",
     "put_marginals",
     "put_matrix",
     "put_observables",
     "put_provenance",
     "put_regimes",
+    "put_targets",
 ]
 
 EVENT_COLUMNS = {
@@ -50,7 +54,7 @@ OBSERVABLE_COLUMNS = {"mean": "long-run mean", "variance": "long-run variance"}
 
 
 def put_cells(file: h5py.File, estimate: Estimate) -> None:
-    """`/cells`: the lattice, the cells in use in their fixed order, their regimes and the basins."""
+    """`/cells`: the lattice, the cells in use in their fixed order, their regimes, bursts and basins."""
     grid, system, regimes = estimate.grid, estimate.case.system, estimate.regimes
     made = group(file, "cells", long_name="the partition", axis_names=" ".join(system.state))
     attrs(made, axis_units=to_json(system.units))
@@ -68,6 +72,9 @@ def put_cells(file: h5py.File, estimate: Estimate) -> None:
         member[regime.cell] = k
     label = "regime that the cell belongs to; -1: none, the cell is left for good"
     put(made, "cell_regime", member, ("cell",), units="1", long_name=label)
+    if estimate.cell_bursts is not None:
+        bursts = np.asarray(estimate.cell_bursts, dtype=np.int64)
+        put(made, "bursts", bursts, ("cell",), units="1", long_name="bursts sent from the cell")
     if estimate.basins is not None:
         columns = np.arange(estimate.basins.shape[1], dtype=np.int32)
         put(made, "regime", columns, ("regime",), units="1", long_name="regime")
@@ -115,12 +122,31 @@ def put_marginals(parent: h5py.Group, marginals: Mapping[str, Marginal]) -> None
     made = group(parent, "marginals", long_name="histograms along the bursts")
     for name, marginal in marginals.items():
         inner = group(made, name, component=name, below=float(marginal.below), above=float(marginal.above))
-        (axis,) = free_names([name], ("mass", "mass_se", "bnds"), ("", "_bnds"))
+        beside = marginal_columns(marginal)
+        (axis,) = free_names([name], ("mass", *beside, "bnds"), ("", "_bnds"))
         bare_dim(inner, "bnds", 2)
         put_intervals(inner, axis, marginal.edges, name, marginal.unit, f"middle of an interval of {name}")
         label = f"share of time that {name} spends in the interval"
-        put(inner, "mass", marginal.mass, (axis,), units="1", long_name=label, ancillary_variables="mass_se")
-        put(inner, "mass_se", marginal.error, (axis,), units="1", long_name=f"{label}: standard error")
+        listed = " ".join(beside)
+        put(inner, "mass", marginal.mass, (axis,), units="1", long_name=label, ancillary_variables=listed)
+        for variable, (values, what, part) in beside.items():
+            put(inner, variable, values, (axis,), units="1", long_name=f"{label}: {what}", **part)
+
+
+def marginal_columns(marginal: Marginal) -> dict[str, tuple[Floats, str, dict[str, str]]]:
+    """What stands beside the masses, by name of the variable: values, what they are, attribute `part` if they are one.
+
+    As for a column of quantities (`tables`): mass_low, mass_high, mass_se, mass_se_PART.
+    """
+    columns: dict[str, tuple[Floats, str, dict[str, str]]] = {}
+    for name, end, values in (("mass_low", "lower", marginal.low), ("mass_high", "upper", marginal.high)):
+        if values is not None:
+            columns[name] = (values, f"{end} end of 95 %", {})
+    columns["mass_se"] = (marginal.error, "standard error", {})
+    parts = tuple(marginal.parts)
+    for part, name in zip(parts, part_variables("mass", parts), strict=True):
+        columns[name] = (marginal.parts[part], f"standard error, part {part}", {"part": part})
+    return columns
 
 
 def put_events(parent: h5py.Group, events: Mapping[str, EventResult], case: CaseRecord) -> None:
@@ -179,19 +205,28 @@ def put_regimes(file: h5py.File, estimate: Estimate) -> h5py.Group:
 
 
 def put_budget(file: h5py.File, estimate: Estimate) -> None:
-    """`/budget`: every number of the file with the parts of its error, a column per part."""
+    """`/budget`: every number of the file with its interval and the parts of its error, a column per part.
+
+    The masses of the marginals have theirs beside them, in `/marginals/COMPONENT`.
+    """
     rows = dict(numbers(estimate.regimes, estimate.outside_share))
     made = group(file, "budget", long_name="parts of the error of every number")
     put_text(made, "number", rows, ("number",), long_name="where the number stands in this file")
     quantities = list(rows.values())
     put_text(made, "unit", [q.unit for q in quantities], ("number",), long_name="unit of value and errors")
     parts = part_names(quantities)
-    columns = {"value": [q.value for q in quantities], "total": [q.error for q in quantities]}
-    fixed = ("number", "unit", "value", "total")
+    columns = {
+        "value": [q.value for q in quantities],
+        "low": [q.low for q in quantities],
+        "high": [q.high for q in quantities],
+        "total": [q.error for q in quantities],
+    }
+    labels = {"value": "the number", "low": "lower end of 95 %", "high": "upper end of 95 %"}
+    fixed = ("number", "unit", *columns)
     for part, name in zip(parts, free_names([p.replace(" ", "_") for p in parts], fixed), strict=True):
         columns[name] = [q.parts.get(part) for q in quantities]
     for name, values in columns.items():
-        label = "the number" if name == "value" else f"standard error: {name.replace('_', ' ')}"
+        label = labels.get(name, f"standard error: {name.replace('_', ' ')}")
         data = np.array([np.nan if v is None else v for v in values], dtype=float)
         put(made, name, data, ("number",), long_name=label)
 
@@ -211,9 +246,15 @@ def numbers(regimes: Sequence[Regime], outside: Quantity) -> Iterator[tuple[str,
 
 
 def put_matrix(file: h5py.File, tally: Tally, n_cell: int) -> None:
-    """`/matrix`: the integer tally as compressed rows; that of the outside state, if any, comes last."""
+    """`/matrix`: the tally as compressed rows; that of the outside state, if any, comes last.
+
+    Counts of bursts are integers; those of reseeded bursts are floats, weights in units of bursts.
+    """
     made = group(file, "matrix", long_name="counts of bursts from cell to cell, by replicate")
     attrs(made, outside_column=np.int64(n_cell), blown_up_column=np.int64(n_cell + 1))
+    if tally.together:
+        attrs(made, together=True, comment="a replicate is an ensemble: only replicates are independent, not rows")
+    weighted = ": weights in units of bursts" if tally.count.dtype.kind == "f" else ""
     for name, size in {
         "row_end": tally.n_cell + 1,
         "row": tally.n_cell,
@@ -225,9 +266,41 @@ def put_matrix(file: h5py.File, tally: Tally, n_cell: int) -> None:
     put(made, "pointer", np.asarray(tally.pointer, dtype=np.int64), ("row_end",), units="1", long_name=label)
     label = "position of the target in the order of cells; the outside and the blown-up state follow them"
     put(made, "column", np.asarray(tally.column, dtype=np.int32), ("entry",), units="1", long_name=label)
-    put(made, "count", tally.count, ("entry", "replicate"), units="1", long_name="bursts that went there")
-    bursts = np.asarray(tally.bursts, dtype=np.int64)
-    put(made, "bursts", bursts, ("row", "replicate"), units="1", long_name="bursts sent from the cell")
+    label = f"bursts that went there{weighted}"
+    put(made, "count", tally.count, ("entry", "replicate"), units="1", long_name=label)
+    bursts = np.asarray(tally.bursts, dtype=np.float64 if tally.bursts.dtype.kind == "f" else np.int64)
+    label = f"bursts sent from the cell{weighted}"
+    put(made, "bursts", bursts, ("row", "replicate"), units="1", long_name=label)
+
+
+def put_effort(file: h5py.File, effort: Sequence[Stage]) -> None:
+    """`/effort`: where the bursts went, a row per stage."""
+    made = group(file, "effort", long_name="where the bursts went, by stage")
+    put_text(made, "stage", [stage.name for stage in effort], ("stage",), long_name="stage of the run")
+    labels = {"sweeps": "passes over the cells", "bursts": "bursts sent", "steps": "time steps taken"}
+    for name, label in labels.items():
+        counted = np.array([getattr(stage, name) for stage in effort], dtype=np.int64)
+        put(made, name, counted, ("stage",), units="1", long_name=label)
+    seconds = np.array([stage.seconds for stage in effort], dtype=float)
+    put(made, "seconds", seconds, ("stage",), units="s", long_name="wall time of the stage")
+
+
+def put_targets(file: h5py.File, targets: Sequence[Target]) -> None:
+    """`/targets`: a row for each number that the accuracy asked for applies to."""
+    made = group(file, "targets", long_name="accuracy asked for and reached")
+    places = [f"events/{target.event}/{target.number}" for target in targets]
+    put_text(made, "target", places, ("target",), long_name="where the number stands in this file")
+    for name, label in {"event": "event name", "number": "which number of the event"}.items():
+        put_text(made, name, [getattr(target, name) for target in targets], ("target",), long_name=label)
+    half_width = "half-width of the 95 percent interval over the value"
+    wanted = np.array([target.wanted for target in targets], dtype=float)
+    put(made, "wanted", wanted, ("target",), units="1", long_name=f"{half_width}: largest allowed")
+    reached = np.array([np.nan if t.reached is None else t.reached for t in targets], dtype=float)
+    put(made, "reached", reached, ("target",), units="1", long_name=f"{half_width}: reached")
+    met = np.array([target.met for target in targets], dtype=bool)
+    put(made, "met", met, ("target",), long_name="whether the accuracy asked for was reached")
+    label = "what limits it; empty if met"
+    put_text(made, "reason", [target.reason for target in targets], ("target",), long_name=label)
 
 
 def put_provenance(file: h5py.File, estimate: Estimate) -> None:

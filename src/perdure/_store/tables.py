@@ -17,7 +17,16 @@ import numpy as np
 from perdure._records import Floats, Quantity
 from perdure._store.layout import attrs, free_names, put, put_text
 
-__all__ = ["part_names", "put_quantities", "read_quantities", "texts"]
+__all__ = [
+    "floats",
+    "optional",
+    "part_columns",
+    "part_names",
+    "part_variables",
+    "put_quantities",
+    "read_quantities",
+    "texts",
+]
 
 
 def part_names(quantities: Sequence[Quantity]) -> tuple[str, ...]:
@@ -111,7 +120,7 @@ def read_quantities(group: h5py.Group, name: str) -> list[Quantity]:
     """The column that `put_quantities` wrote; a single quantity comes as a list of one."""
     value, low, high = (floats(group, name + suffix) for suffix in ("", "_low", "_high"))
     beside = str(group[name].attrs["ancillary_variables"]).split(" ")
-    parts = {str(group[v].attrs["part"]): floats(group, v) for v in beside if "part" in group[v].attrs}
+    parts = part_columns(group, beside)
     n = len(value)
     units = texts(group, f"{name}_unit") if f"{name}_unit" in beside else [str(group[name].attrs["units"])] * n
     reasons = texts(group, f"{name}_reason") if f"{name}_reason" in beside else [""] * n
@@ -126,6 +135,11 @@ def read_quantities(group: h5py.Group, name: str) -> list[Quantity]:
         )
         for i in range(n)
     ]
+
+
+def part_columns(group: h5py.Group, beside: Sequence[str]) -> dict[str, Floats]:
+    """Standard errors by part of the error budget, from the variables listed beside a number."""
+    return {str(group[v].attrs["part"]): floats(group, v) for v in beside if "part" in group[v].attrs}
 
 
 def floats(group: h5py.Group, name: str) -> Floats:

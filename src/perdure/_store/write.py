@@ -21,12 +21,14 @@ from perdure._store.sections import (
     put_budget,
     put_cells,
     put_density,
+    put_effort,
     put_events,
     put_marginals,
     put_matrix,
     put_observables,
     put_provenance,
     put_regimes,
+    put_targets,
 )
 from perdure.errors import OutputError
 
@@ -118,6 +120,10 @@ def fill(file: h5py.File, estimate: Estimate) -> None:
     put_budget(file, estimate)
     if estimate.tally is not None:
         put_matrix(file, estimate.tally, len(keys))
+    if estimate.effort:
+        put_effort(file, estimate.effort)
+    if estimate.targets:
+        put_targets(file, estimate.targets)
     put_provenance(file, estimate)
     attrs(file, complete=True)
 
@@ -181,8 +187,11 @@ def size_of(estimate: Estimate) -> int:
     n_cell, n_axis = len(estimate.keys), int(np.sum(estimate.grid.counts))
     size = 1_000_000 + len(estimate.case.text) + 36 * n_cell + 16 * len(estimate.plan.seed_keys)
     size += (1 + len(estimate.regimes)) * 24 * n_axis
-    size += sum(24 * len(r.cell) + sum(40 * len(m.mass) for m in r.marginals.values()) for r in estimate.regimes)
+    marginals = [m for r in estimate.regimes for m in r.marginals.values()]
+    size += sum(24 * len(r.cell) for r in estimate.regimes)
+    size += sum((56 + 8 * len(m.parts)) * len(m.mass) for m in marginals)
     size += 0 if estimate.basins is None else estimate.basins.nbytes
+    size += 0 if estimate.cell_bursts is None else 8 * n_cell
     if estimate.tally is not None:
         tally = estimate.tally
         size += 8 * (n_cell + 1) + 4 * len(tally.column) + tally.count.nbytes + 8 * tally.bursts.size

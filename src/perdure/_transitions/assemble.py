@@ -41,11 +41,14 @@ class Collected:
     tally : Tally
     sums : ndarray, shape (n_cell, n_replicate, n_sum)
     slots : SlotRows
+    sent : ndarray of int64, shape (n_cell,)
+        Bursts sent from each cell, whatever they weigh.
     """
 
     tally: Tally
     sums: Floats
     slots: SlotRows
+    sent: Integers
 
 
 class RowStore:
@@ -82,7 +85,7 @@ class RowStore:
         tally = Tally(pointer, column, count, bursts)
         if n_known > n:
             tally = merged(tally)
-        return Collected(tally, sums, SlotRows(*slots, plan.n_step // plan.stride, n_interval))
+        return Collected(tally, sums, SlotRows(*slots, plan.n_step // plan.stride, n_interval), bursts.sum(axis=1))
 
 
 def with_outside(collected: Collected, row: Rows, column: NDArray[np.int32], n_burst: int) -> Collected:
@@ -112,7 +115,8 @@ def with_outside(collected: Collected, row: Rows, column: NDArray[np.int32], n_b
         slots.n_sample,
         slots.n_interval,
     )
-    return Collected(grown, np.concatenate([collected.sums, row.sums]), more)
+    sent = np.append(collected.sent, n_burst)
+    return Collected(grown, np.concatenate([collected.sums, row.sums]), more, sent)
 
 
 def without(collected: Collected, drop: NDArray[np.bool_]) -> Collected:
@@ -128,7 +132,7 @@ def without(collected: Collected, drop: NDArray[np.bool_]) -> Collected:
     order = np.lexsort((column, row))
     kept = merged(Tally(pointer, column[order], count[order], tally.bursts[keep]))
     more = SlotRows(*kept_rows(slots.pointer, slots.column, slots.count, keep), slots.n_sample, slots.n_interval)
-    return Collected(kept, collected.sums[keep], more)
+    return Collected(kept, collected.sums[keep], more, collected.sent[keep])
 
 
 def kept_rows(

@@ -22,14 +22,17 @@ class Lumped:
         Of the blocks, with one replicate.
     block : ndarray of int64, shape (n,)
         Block of each member of the class.
+    share : ndarray, shape (n,)
+        Part of the bursts of its block that a member sent.
     """
 
     tally: Tally
     block: Integers
+    share: Floats
 
     def lifted(self, mass: Floats) -> Floats:
-        """Mass of the blocks shared out evenly among their members, shape (n,)."""
-        return np.asarray((mass / np.bincount(self.block, minlength=len(mass)))[self.block])
+        """Mass of the blocks shared out among their members by the bursts that they sent, shape (n,)."""
+        return np.asarray(mass[self.block] * self.share)
 
 
 def lumped(tally: Tally, members: Integers, grid: BoxGrid, keys: Integers, factor: int) -> Lumped:
@@ -49,10 +52,12 @@ def lumped(tally: Tally, members: Integers, grid: BoxGrid, keys: Integers, facto
     lengths = tally.pointer[members + 1] - tally.pointer[members]
     at = np.repeat(tally.pointer[members] - np.concatenate([[0], np.cumsum(lengths)[:-1]]), lengths)
     at += np.arange(len(at))
-    total = tally.count[at].sum(axis=1, dtype=np.int64)
+    exact = np.float64 if np.issubdtype(tally.count.dtype, np.floating) else np.int64
+    total = tally.count[at].sum(axis=1, dtype=exact)
     row = np.repeat(block, lengths)
     matrix = csr_array((total, (row, place[tally.column[at]])), shape=(n_block, n_block + 1))
     matrix.sum_duplicates()
-    bursts = np.asarray(matrix.sum(axis=1), dtype=np.int64).reshape(-1, 1)
+    bursts = np.asarray(matrix.sum(axis=1), dtype=exact).reshape(-1, 1)
     coarse = Tally(matrix.indptr.astype(np.int64), matrix.indices.astype(np.int32), matrix.data.reshape(-1, 1), bursts)
-    return Lumped(coarse, block)
+    sent = tally.bursts[members].sum(axis=1).astype(float)
+    return Lumped(coarse, block, sent / np.bincount(block, weights=sent)[block])

@@ -5,8 +5,10 @@ from __future__ import annotations
 import os
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from perdure._kernels.products import (
     left_product,
@@ -29,9 +31,7 @@ class TransitionMatrix:
 
     def __init__(self, tally: Tally) -> None:
         self.tally = tally
-        total = np.empty(len(tally.column), dtype=np.min_scalar_type(int(tally.bursts.sum(axis=1).max(initial=0))))
-        total_counts(tally.count, total)
-        self.total = total
+        self.total = totals(tally)
         self.inverse = 1.0 / tally.bursts.sum(axis=1)
 
     @property
@@ -64,8 +64,8 @@ class TransitionMatrix:
         """Probability, shape (n_cell,), of ending outside or blown up."""
         return 1.0 - self.right(np.ones(self.n_cell))
 
-    def replicate_right(self, values: Floats, begin: int, end: int) -> Floats:
-        """Mean of values (n_cell, k) where the bursts of each cell and replicate ended.
+    def replicate_sums(self, values: Floats, begin: int, end: int) -> Floats:
+        """Sum of values (n_cell, k) where the bursts of each cell and replicate ended.
 
         Rows `begin` to `end` only; shape (end - begin, n_replicate, k). Outside counts as zero.
         """
@@ -74,7 +74,7 @@ class TransitionMatrix:
         x[: self.n_cell] = values
         y = np.empty((end - begin, tally.count.shape[1], values.shape[1]))
         replicate_product(tally.pointer, tally.column, tally.count, x, begin, end, y)
-        return np.asarray(y / tally.bursts[begin:end, :, None])
+        return y
 
     def scatter(self, weight: Floats, begin: int, out: Floats) -> None:
         """Add count * weight of each cell and replicate, weight (n, n_replicate, k), to the cells where bursts ended.
@@ -83,6 +83,16 @@ class TransitionMatrix:
         """
         tally = self.tally
         scatter_product(tally.pointer, tally.column, tally.count, weight, begin, begin + len(weight), out)
+
+
+def totals(tally: Tally) -> NDArray[Any]:
+    """Counts summed over replicates, shape (n_entry,), in the shortest type that holds them."""
+    if np.issubdtype(tally.count.dtype, np.floating):
+        # rows must sum to their bursts to the last digits, and single precision would not
+        return np.asarray(tally.count.sum(axis=1, dtype=np.float64))
+    total = np.empty(len(tally.column), dtype=np.min_scalar_type(int(tally.bursts.sum(axis=1).max(initial=0))))
+    total_counts(tally.count, total)
+    return total
 
 
 def in_columns(product: Callable[[Floats], Floats], values: Floats) -> Floats:

@@ -54,6 +54,7 @@ BROKEN = [
      ["found 0", "between 0 and 1", "accuracy = 0.05"]),
     ("[case]\naccuracy = 1.0\n" + FLOW, 2, "[case] accuracy", ["found 1.0"]),
     ("[case]\naccuracy = nan\n" + FLOW, 2, "[case] accuracy", ["found nan"]),
+    ("[case]\naccuracy = false\n" + FLOW, 2, "[case] accuracy", ["found false", "or leave it out"]),
     ('[case]\naccuracy = "0.1"\n' + FLOW, 2, "[case] accuracy", ['found "0.1"']),
     ('[case]\ncaution = "\\u0007"\n' + FLOW, 2, "[case] caution", ["without control characters"]),
     # system
@@ -221,9 +222,11 @@ BROKEN = [
     (BURSTS + "scheme = 'weak2'\n", 8, "[bursts] scheme", ['found "weak2"', "allowed: rk4"]),
     (MAP + "[bursts]\nscheme = 'rk4'\n", 7, "[bursts] scheme", ["no scheme in a map"]),
     (NOISE + "x=1\n[bursts]\nscheme = 'rk4'\n", 10, "[bursts] scheme", ["euler-maruyama, weak2"]),
-    (BURSTS + "reseed = true\n", 8, "[bursts] reseed", ["not available in this version yet", "false"]),
-    (BURSTS + "reseed = 1\n", 8, "[bursts] reseed", ["found 1"]),
-    (BURSTS + "sweeps = 0\n", 8, "[bursts] sweeps", ["found 0"]),
+    (BURSTS + "reseed = 1\n", 8, "[bursts] reseed", ["found 1", "true or false", "reseed = true, or leave it out"]),
+    (BURSTS + "sweeps = 0\n", 8, "[bursts] sweeps", ["found 0", "from 1"]),
+    (BURSTS + "sweeps = 2.0\n", 8, "[bursts] sweeps", ["found 2.0", "a whole number"]),
+    (BURSTS + "reseed = false\nsweeps = 4\n", 9, "[bursts] sweeps",
+     ["sweeps beside reseed = false", "reseed = true, or remove sweeps"]),
     # the rest
     (FLOW + "[crosscheck]\nstarts = 1\n", 8, "[crosscheck] starts", ["found 1", "at least 2"]),
     (FLOW + "[crosscheck]\nduration = 0\n", 8, "[crosscheck] duration", ["above 0"]),

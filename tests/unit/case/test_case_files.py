@@ -73,7 +73,7 @@ step = 0.01
 per_cell = 64
 seeds = "uniform"
 scheme = "rk4"
-reseed = false
+reseed = true
 sweeps = 3
 
 [events.fast]
@@ -123,7 +123,7 @@ def test_every_table_is_read(load: Load) -> None:
         periodic=("theta",),
     )
     assert case.bursts == BurstOptions(
-        duration=2.0, step=0.01, per_cell=64, seeds="uniform", scheme="rk4", reseed=False, sweeps=3
+        duration=2.0, step=0.01, per_cell=64, seeds="uniform", scheme="rk4", reseed=True, sweeps=3
     )
     assert [event.name for event in case.events] == ["fast", "coût élevé"]
     assert [(o.name, o.unit) for o in case.observables] == [("energy", "1/s2"), ("speed", "1")]
@@ -136,11 +136,28 @@ def test_every_table_is_read(load: Load) -> None:
 
 def test_defaults(load: Load) -> None:
     case = load(FLOW)
-    assert (case.title, case.seed, case.accuracy, case.caution) == ("loop", 0, 0.05, "")
+    assert (case.title, case.seed, case.accuracy, case.caution) == ("loop", 0, None, "")
     assert (case.system.units, case.system.time_unit) == (("1", "1"), "1")
     assert (case.cells, case.bursts, case.output) == (CellOptions(), BurstOptions(), OutputOptions())
     assert (case.events, case.crosscheck, case.study) == ((), {}, {})
     assert load(MAP).system.time_unit == "step"
+
+
+@pytest.mark.parametrize(
+    ("lines", "expected"),
+    [
+        ("", (None, None)),
+        ("reseed = true", (True, None)),
+        ("reseed = false", (False, None)),
+        ("sweeps = 1", (None, 1)),
+        ("reseed = true\nsweeps = 40", (True, 40)),
+    ],
+)
+def test_reseeding_is_chosen_or_left_to_the_program(
+    load: Load, lines: str, expected: tuple[bool | None, int | None]
+) -> None:
+    bursts = load(f"{FLOW}[bursts]\n{lines}\n").bursts
+    assert (bursts.reseed, bursts.sweeps) == expected
 
 
 def test_text_is_kept_to_the_byte(load: Load) -> None:

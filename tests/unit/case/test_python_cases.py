@@ -104,6 +104,12 @@ def test_defaults_are_those_of_a_file(tmp_path: Path) -> None:
     assert fields(case) == fields(load_case(path))
 
 
+def test_no_accuracy_is_written_where_none_is_asked_for() -> None:
+    assert "accuracy" not in Case(system=FLOW).text
+    assert Case(system=FLOW, accuracy=0.5).text.count("accuracy = 0.5") == 1
+    assert Case(system=FLOW, accuracy=None).accuracy is None
+
+
 def test_a_case_is_a_frozen_record_that_can_be_copied_and_sent() -> None:
     case = Case(**TABLES)
     assert isinstance(case, CaseRecord)

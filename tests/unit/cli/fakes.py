@@ -9,7 +9,7 @@ from typing import Any
 
 import numpy as np
 
-from perdure._records import BoxGrid, EventResult, ObservableResult, Plan, Quantity, Regime, System
+from perdure._records import BoxGrid, EventResult, ObservableResult, Plan, Quantity, Regime, Stage, System, Target
 
 SHA256 = "0f" * 32
 
@@ -66,6 +66,9 @@ class FakeResult:
     counts: Mapping[str, int] = field(default_factory=lambda: {"bursts": 192, "steps": 9600, "blown_up": 0})
     timings: Mapping[str, float] = field(default_factory=lambda: {"pilot": 0.4, "bursts": 60.2})
     n_cell: int = 3
+    effort: tuple[Stage, ...] = ()
+    focus: tuple[float, tuple[float, ...]] | None = None
+    targets: tuple[Target, ...] = ()
     fault: Exception | None = None
     saved: list[Path] = field(default_factory=list)
 
@@ -86,6 +89,7 @@ class FakeCase:
     title: str
     seed: int
     system: System
+    accuracy: float | None = None
 
 
 LOOP = FakeCase("Convection loop", 7, System("flow", ("x", "z"), ("m", "1"), "s", {}))
@@ -111,13 +115,17 @@ COST = {"cells": 24, "bursts": 1536, "steps": 153600, "memory_bytes": 2.5e8, "se
 
 
 class Engine:
-    """Stands in for `_case`, `_pipeline` and `_result`; `log` lists the calls in their order."""
+    """Stands in for `_case`, `_pipeline` and `_result`.
+
+    `log` lists the calls in their order, `steered` what `estimate` was given to steer the run.
+    """
 
     def __init__(self) -> None:
         self.case: Any = LOOP
         self.result: Any = FakeResult()
         self.work: Callable[[], None] = lambda: None
         self.log: list[tuple[str, Any]] = []
+        self.steered: dict[str, Any] = {}
 
     def load_case(self, path: Path, *, seed: int | None = None) -> Any:
         self.log.append(("load_case", path))
@@ -125,8 +133,11 @@ class Engine:
             raise self.case
         return self.case if seed is None else replace(self.case, seed=seed)
 
-    def estimate(self, case: Any, *, workers: int | None = None, progress: Any = None, command: str = "") -> Any:
+    def estimate(
+        self, case: Any, *, workers: int | None = None, progress: Any = None, command: str = "", **steered: Any
+    ) -> Any:
         self.log.append(("estimate", (case.seed, workers, command)))
+        self.steered = steered
         progress("pilot", 0, 1)
         progress("bursts", 3, 400)
         self.work()

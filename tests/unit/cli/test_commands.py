@@ -13,8 +13,9 @@ from typing import Any
 
 import pytest
 
-from perdure import __version__
+from perdure import Budget, __version__
 from perdure._cli.main import cli, main
+from perdure._records import Target
 from perdure.errors import CaseError, DensityFileError, NoAttractorError, OutputError, ResourceError
 from unit.cli.fakes import COST, LOOP, MAP, PLAN, SHA256, Engine, FakeResult
 
@@ -82,6 +83,88 @@ def test_failed_check_is_status_1_and_saved(engine: Engine, capsys: Capture) -> 
         "perdure: the cover did not close",
         "perdure: loop.h5 is saved, but a stated check failed (exit status 1)",
     ]
+
+
+UNMET = (
+    Target("reversal", "share", 0.02, 0.0195, True),
+    Target("reversal", "return_period", 0.02, 0.0341, False, "the budget of steps is spent"),
+)
+
+
+@pytest.mark.parametrize("more", [[], ["--quiet"], ["--json"]])
+def test_an_accuracy_that_was_not_reached_is_status_1_and_saved(
+    engine: Engine, capsys: Capture, more: list[str]
+) -> None:
+    engine.result = FakeResult(targets=UNMET)
+    assert main(["run", "loop.toml", *more]) == 1
+    assert engine.result.saved == [Path("loop.h5")]
+    assert capsys.readouterr().err.splitlines()[-2:] == [
+        "perdure: event reversal: the accuracy of the return period was not reached: wanted 0.02, reached 0.035: "
+        "the budget of steps is spent",
+        "perdure: loop.h5 is saved, but an accuracy was not reached (exit status 1)",
+    ]
+
+
+def test_an_accuracy_that_was_reached_is_status_0(engine: Engine, capsys: Capture) -> None:
+    """Negative control of the test above."""
+    engine.result = FakeResult(targets=UNMET[:1])
+    assert main(["run", "loop.toml", "--quiet"]) == 0
+    assert capsys.readouterr().err == ""
+
+
+def test_run_is_steered_only_when_asked_to(engine: Engine) -> None:
+    assert main(["run", "loop.toml", "--quiet"]) == 0
+    assert engine.steered == {}
+    arguments = ["--accuracy", "0.02", "--budget-steps", "2e10", "--budget-minutes", "30", "--budget-memory", "8GB"]
+    assert main(["run", "loop.toml", "--quiet", *arguments]) == 0
+    assert engine.steered == {"accuracy": 0.02, "budget": Budget(steps=2e10, minutes=30.0, memory=8e9)}
+    command = (
+        "perdure run loop.toml --accuracy 0.02 --budget-steps 20000000000 --budget-minutes 30 "
+        "--budget-memory 8000000000"
+    )
+    assert engine.log[-1] == ("estimate", (7, None, command))
+    # what is on record can be typed again
+    assert main([*command.split()[1:], "--quiet"]) == 0
+    assert engine.log[-1] == ("estimate", (7, None, command))
+    assert main(["run", "loop.toml", "--quiet", "--accuracy", "0.5"]) == 0
+    assert engine.steered == {"accuracy": 0.5}
+
+
+def test_a_budget_may_rest_on_the_accuracy_of_the_case(engine: Engine) -> None:
+    engine.case = dataclasses.replace(LOOP, accuracy=0.1)
+    assert main(["run", "loop.toml", "--quiet", "--budget-minutes", ".5"]) == 0
+    assert engine.steered == {"budget": Budget(minutes=0.5)}
+
+
+def test_a_budget_without_an_accuracy_is_refused_before_any_work(engine: Engine, capsys: Capture) -> None:
+    assert main(["run", "loop.toml", "--budget-minutes", "3", "--budget-memory", "1e9"]) == 2
+    assert capsys.readouterr().err == (
+        "perdure: --budget-minutes, --budget-memory: found a budget without an accuracy to spend it on; allowed: a "
+        "budget beside --accuracy or beside accuracy in [case]; add for example --accuracy 0.05, or leave out "
+        "--budget-minutes, --budget-memory\n"
+    )
+    assert [call for call, _ in engine.log] == ["load_case"]
+    assert engine.result.saved == []
+
+
+@pytest.mark.parametrize(
+    ("text", "size"),
+    [("8e9", 8e9), ("8GB", 8e9), ("500MB", 5e8), ("1.5 gb", 1.5e9), ("64kB", 64e3), ("2TB", 2e12), ("70b", 70.0)],
+)
+def test_sizes_of_memory(engine: Engine, text: str, size: float) -> None:
+    assert main(["run", "loop.toml", "--quiet", "--accuracy", "0.1", "--budget-memory", text]) == 0
+    assert engine.steered["budget"] == Budget(memory=size)
+
+
+def test_show_prints_the_budget(engine: Engine, capsys: Capture) -> None:
+    assert main(["show", "loop.toml", "--budget"]) == 0
+    lines = capsys.readouterr().out.splitlines()
+    assert lines[2] == "number                   value                half-width  sampling"
+    assert lines[3] == "reversal, share of time  0.02165 ± 0.00043    0.00086     0.00043"
+    assert main(["show", "loop.toml", "--budget", "--json"]) == 2
+    out, err = capsys.readouterr()
+    assert out == ""
+    assert err.startswith("perdure: --budget: found beside --json; allowed: one of the two; leave out --budget")
 
 
 def test_every_mistake_of_a_case_has_a_line(engine: Engine, capsys: Capture) -> None:
@@ -163,6 +246,23 @@ def test_show_refuses_a_foreign_file(engine: Engine, capsys: Capture, monkeypatc
         (["run", "loop.toml", "--workers", "1025"], "1025 is not in the range"),
         (["run", "loop.toml", "--workers", "two"], "'two' is not a valid integer range"),
         (["run", "loop.toml", "--seed", "-1"], "-1 is not in the range x>=0"),
+        (
+            ["run", "loop.toml", "--accuracy", "1"],
+            "'--accuracy': found '1'; allowed: a number between 0 and 1; give for example 0.05",
+        ),
+        (["run", "loop.toml", "--accuracy", "0"], "found '0'"),
+        (["run", "loop.toml", "--accuracy", "-0.1"], "found '-0.1'"),
+        (["run", "loop.toml", "--accuracy", "nan"], "found 'nan'"),
+        (["run", "loop.toml", "--accuracy", "5%"], "found '5%'"),
+        (["run", "loop.toml", "--budget-steps", "0"], "found '0'; allowed: a number above 0; give for example 2e10"),
+        (["run", "loop.toml", "--budget-steps", "1e999"], "found '1e999'"),
+        (["run", "loop.toml", "--budget-minutes", "inf"], "found 'inf'"),
+        (["run", "loop.toml", "--budget-minutes", "30min"], "found '30min'"),
+        (
+            ["run", "loop.toml", "--budget-memory", "8 apples"],
+            "'--budget-memory': found '8 apples'; allowed: bytes, or a number of kB, MB, GB or TB, above 0",
+        ),
+        (["run", "loop.toml", "--budget-memory", "GB"], "found 'GB'"),
         (["run", "loop.toml", "--sed", "1"], "No such option '--sed'. Did you mean '--seed'?"),
         (["run", "loop.toml", "-o", "gone/a.h5"], "gone/a.h5: the density file cannot be written"),
         (["run", "loop.toml", "-o", "loop.toml"], "-o loop.toml: this is the case file"),

@@ -26,6 +26,7 @@ counts = {x = 27}
 [bursts]
 steps = 2
 per_cell = 32
+reseed = false
 [events.left]
 when = "x < 0.25"
 [events.never]
@@ -93,3 +94,82 @@ def test_mistakes_in_a_case_leave_no_file(folder: Path, capsys: Capture) -> None
 def test_a_file_that_is_no_density_file(folder: Path, capsys: Capture) -> None:
     assert main(["show", "circle.toml"]) == 2
     assert capsys.readouterr().err.startswith("perdure: ")
+
+
+# ------------------------------------------------------------------------------------- accuracy on request
+
+STEERED = (
+    CASE.replace("per_cell = 32\nreseed = false\n", "").replace("steps = 2\n", "steps = 64\n")
+    .replace("[events.never]\nwhen = \"x > 2\"\n", "")
+)  # fmt: skip
+
+
+@pytest.fixture
+def steered(folder: Path) -> Path:
+    (folder / "circle.toml").write_text(STEERED, encoding="utf-8")
+    return folder
+
+
+def test_an_accuracy_is_reached(steered: Path, capsys: Capture) -> None:
+    """Status 0; the targets in the object, the file and the table; the truth, 1/4 and every sixth step, inside."""
+    assert main(["run", "circle.toml", "--quiet", "--json", "--accuracy", "0.02", "--workers", "2"]) == 0
+    out, err = capsys.readouterr()
+    assert err == ""
+    run = json.loads(out)
+    targets = [(t["event"], t["number"], t["wanted"], t["met"], t["reason"]) for t in run["targets"]]
+    assert targets == [("left", number, 0.02, True, "") for number in ("share", "return_period")]
+    for number, truth in (("share", 0.25), ("return_period", 6.0)):
+        found = run["regimes"][0]["events"]["left"][number]
+        assert found["low"] <= truth <= found["high"]
+        assert (found["high"] - found["low"]) / 2.0 <= 0.02 * found["value"]
+    assert main(["show", "circle.h5"]) == 0
+    lines = [line.split() for line in capsys.readouterr().out.splitlines()]
+    assert ["accuracy", "of", "event", "wanted", "reached"] in [line[:5] for line in lines]
+    with perdure.open("circle.h5") as file:
+        assert [target.met for target in file.targets] == [True, True]
+        assert "--accuracy 0.02" in file.command
+
+
+def test_an_accuracy_that_is_not_reached(steered: Path, capsys: Capture) -> None:
+    """Status 1 and the file; the reason on standard error and in the table, where no check of the numbers failed."""
+    assert main(["run", "circle.toml", "--accuracy", "0.0001", "--budget-steps", "1e6", "--workers", "2"]) == 1
+    out, err = capsys.readouterr()
+    assert (steered / "circle.h5").exists()
+    assert "event left: the accuracy of the share of time was not reached: wanted 0.0001" in err
+    assert "the budget of 1e+06 steps is spent" in err
+    assert "not met: the budget of 1e+06 steps is spent" in out
+    assert "circle.h5 is saved, but an accuracy was not reached (exit status 1)" in err
+    assert "a stated check failed" not in err + out
+
+
+def test_an_accuracy_in_the_case_file_steers_the_run(steered: Path, capsys: Capture) -> None:
+    text = STEERED.replace("seed = 3", "seed = 3\naccuracy = 0.05")
+    (steered / "circle.toml").write_text(text, encoding="utf-8")
+    for options, wanted in (((), 0.05), (("--accuracy", "0.1"), 0.1)):
+        assert main(["run", "circle.toml", "--quiet", "--json", *options]) == 0
+        assert [t["wanted"] for t in json.loads(capsys.readouterr().out)["targets"]] == [wanted, wanted]
+
+
+@pytest.mark.parametrize(
+    ("options", "told"),
+    [
+        (["--accuracy", "0"], "--accuracy"),
+        (["--accuracy", "1.5"], "--accuracy"),
+        (["--budget-steps", "1e6"], "without an accuracy"),
+        (["--accuracy", "0.1", "--budget-steps", "-1"], "--budget-steps"),
+    ],
+)
+def test_requests_without_sense_leave_no_file(steered: Path, capsys: Capture, options: list[str], told: str) -> None:
+    assert main(["run", "circle.toml", *options]) == 2
+    err = capsys.readouterr().err
+    for part in (told, "found", "allowed"):
+        assert part in err
+    assert not (steered / "circle.h5").exists()
+
+
+def test_plain_bursts_have_no_accuracy(folder: Path, capsys: Capture) -> None:
+    """The case of the other tests asks for plain bursts."""
+    assert main(["run", "circle.toml", "--accuracy", "0.05"]) == 2
+    (line,) = capsys.readouterr().err.splitlines()
+    assert "circle.toml, [bursts] reseed: found false beside accuracy 0.05" in line
+    assert not (folder / "circle.h5").exists()

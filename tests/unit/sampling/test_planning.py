@@ -34,17 +34,29 @@ def test_given_bursts_per_cell(given: int, n_cell: int, expected: tuple[int, int
 
 @pytest.mark.parametrize("n_cell", [1, 50, 3000, 5000, 10**6])
 @pytest.mark.parametrize("n_step", [1, 100, 10**5])
-def test_found_bursts_per_cell(n_cell: int, n_step: int) -> None:
-    """A power of two within the bounds; within the budgets wherever the fewest allow it."""
-    per_cell, n_replicate, why = bursts_per_cell(BurstOptions(), n_cell, n_step)
-    assert planning.FEWEST <= per_cell <= planning.MOST
+@pytest.mark.parametrize(("reseed", "effort"), [(None, 1.0), (True, 1.0), (None, 4.0), (False, 1.0), (False, 0.25)])
+def test_found_bursts_per_cell(n_cell: int, n_step: int, reseed: bool | None, effort: float) -> None:
+    """A power of two within the bounds; the largest within the budget, of which reseeded bursts leave a quarter."""
+    per_cell, n_replicate, why = bursts_per_cell(BurstOptions(reseed=reseed), n_cell, n_step, effort)
+    fewest = planning.FEWEST if reseed is False else planning.FEWEST_BEFORE
+    part = effort * (1.0 if reseed is False else planning.PLAIN_PART)
+    assert fewest <= per_cell <= planning.MOST
     assert per_cell & (per_cell - 1) == 0
     assert per_cell % n_replicate == 0
     assert n_replicate == (4 if n_cell >= planning.MANY_CELLS else 8)
-    if per_cell > planning.FEWEST:
-        assert per_cell * n_cell <= planning.BURST_BUDGET
-        assert per_cell * n_cell * n_step <= planning.STEP_BUDGET
-    assert "per cell" in why
+
+    def affordable(n: int) -> bool:
+        return n * n_cell <= part * min(planning.BURST_BUDGET, planning.STEP_BUDGET / n_step)
+
+    assert affordable(per_cell) or per_cell == fewest
+    assert not affordable(2 * per_cell) or per_cell == planning.MOST
+    assert f"{fewest} to {planning.MOST} per cell" in why
+    assert ("before reseeding" in why) == (reseed is not False)
+
+
+def test_burst_budget_is_the_scarcer_of_bursts_and_steps() -> None:
+    assert planning.burst_budget(1) == planning.BURST_BUDGET
+    assert planning.burst_budget(10**6) == pytest.approx(planning.STEP_BUDGET / 1e6)
 
 
 def test_domain_is_the_range_of_the_pilot() -> None:
@@ -76,18 +88,30 @@ def test_domain_of_a_fixed_point_has_a_width() -> None:
     np.testing.assert_allclose(found.upper + found.lower, [80.0, 0.0])
 
 
-def test_boxes_per_axis() -> None:
-    pilot = pilot_of(np.zeros((2, 10)))
-    counts, why = boxes_per_axis(system_of("spiral"), CellOptions(), pilot)
-    np.testing.assert_array_equal(counts, [planning.AXIS_BOXES[2]] * 2)
-    assert f"{planning.AXIS_BOXES[2]} per axis in 2 dimensions" in why
-    counts, _ = boxes_per_axis(system_of("spiral"), CellOptions(), replace(pilot, at_rest=True))
+@pytest.mark.parametrize("coarse", [False, True])
+@pytest.mark.parametrize("reseeded", [False, True])
+@pytest.mark.parametrize(("name", "n_dim"), [("logistic", 1), ("spiral", 2)])
+def test_boxes_per_axis(name: str, n_dim: int, reseeded: bool, coarse: bool) -> None:
+    """Reseeded bursts take fewer; half of the usual where coarse; a number given goes before."""
+    pilot, system = pilot_of(np.zeros((n_dim, 10))), system_of(name)
+
+    def boxes(cells: CellOptions, pilot: Pilot = pilot) -> tuple[np.ndarray, str]:
+        return boxes_per_axis(system, cells, pilot, reseeded=reseeded, coarse=coarse)
+
+    usual = (planning.RESEEDED_BOXES if reseeded else planning.AXIS_BOXES)[n_dim] // (2 if coarse else 1)
+    counts, why = boxes(CellOptions())
+    np.testing.assert_array_equal(counts, [usual] * n_dim)
+    assert f"{usual} per axis in {n_dim} dimension" in why
+    counts, _ = boxes(CellOptions(), replace(pilot, at_rest=True))
     assert (counts % 2 == 1).all(), "a fixed point in the middle must lie inside a box"
-    counts, why = boxes_per_axis(system_of("spiral"), CellOptions(count=1000, counts={"y": 7}), pilot)
-    np.testing.assert_array_equal(counts, [32, 7])
+    counts, why = boxes(CellOptions(count=1000, counts={system.state[-1]: 7}))
+    np.testing.assert_array_equal(counts, [32, 7] if n_dim == 2 else [7])
     assert why == "from [cells] count"
-    counts, _ = boxes_per_axis(system_of("logistic"), CellOptions(), pilot)
-    np.testing.assert_array_equal(counts, [planning.AXIS_BOXES[1]])
+
+
+def test_reseeded_bursts_take_fewer_boxes() -> None:
+    assert planning.RESEEDED_BOXES.keys() == planning.AXIS_BOXES.keys()
+    assert all(planning.RESEEDED_BOXES[n] < most for n, most in planning.AXIS_BOXES.items())
 
 
 @pytest.mark.parametrize("size", [1, 2, 8, 13, 16])

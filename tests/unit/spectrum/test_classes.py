@@ -9,7 +9,8 @@ import numpy as np
 import pytest
 
 from perdure._records import Tally
-from perdure._spectrum import closed_classes, parts_without, period_of
+from perdure._spectrum import closed_classes, lasting, parts_without, period_of
+from perdure._spectrum.classes import STRAY
 from unit.transitions.support import tally_of
 
 OUT, BLOWN = -2, -1
@@ -142,3 +143,90 @@ def test_random_graphs_against_reachability(seed: int) -> None:
             expected.add(tuple(ahead.tolist()))
     assert {tuple(cells) for cells in members(tally_of(counts))} == expected
     assert expected or seed > 0
+
+
+def kept(n: int, flows: dict[tuple[int, int], float]) -> list[int]:
+    """Rows that `lasting` keeps of n rows with these weights; -1 leads to no row."""
+    edges = sorted(flows)
+    pointer = np.concatenate([[0], np.cumsum(np.bincount([i for i, _ in edges], minlength=n))]).astype(np.int64)
+    found = lasting(pointer, np.array([j for _, j in edges], dtype=np.int64), np.array([flows[e] for e in edges]))
+    assert found.shape == (n,)
+    return [int(k) for k in np.flatnonzero(found)]
+
+
+# a regime of three cells that hold 100 in all
+REGIME = {(0, 1): 40.0, (1, 2): 40.0, (2, 0): 10.0, (2, 2): 10.0}
+
+
+def test_all_of_one_regime_lasts() -> None:
+    assert kept(3, REGIME) == [0, 1, 2]
+
+
+@pytest.mark.parametrize(("weight", "lasts"), [(1e-9, False), (0.9, False), (1.1, True), (30.0, True)])
+def test_cells_without_a_way_back_need_weight(weight: float, lasts: bool) -> None:
+    """A cell that leads to itself alone: dropped below a hundredth of all weight, a regime above it."""
+    assert STRAY == 0.01
+    assert kept(4, REGIME | {(2, 3): 1e-3, (3, 3): weight}) == ([0, 1, 2, 3] if lasts else [0, 1, 2])
+
+
+def test_cells_that_have_a_way_back_need_none() -> None:
+    """Negative control: however light, a cell of the regime itself stays."""
+    assert kept(4, REGIME | {(2, 3): 1e-9, (3, 0): 1e-9}) == [0, 1, 2, 3]
+
+
+def test_dead_ends_fall_back_along_their_chain() -> None:
+    """0 to 2 and back, and 2 -> 3 -> 4 -> 5 -> 6, which leads to no row or sent nothing, or only to what has no weight;
+    also where the chain holds most of the weight."""
+    chain = {(2, 3): 1.0, (3, 4): 1.0, (4, 5): 1.0, (5, 6): 1.0}
+    assert kept(7, REGIME | chain) == [0, 1, 2]
+    assert kept(7, REGIME | chain | {(6, -1): 1.0}) == [0, 1, 2]
+    assert kept(7, REGIME | chain | {(6, 0): 0.0}) == [0, 1, 2]
+    assert kept(7, REGIME | dict.fromkeys(chain, 1e4) | {(6, -1): 1e4}) == [0, 1, 2]
+    # negative control: with a way back all of it stays
+    assert kept(7, REGIME | chain | {(6, 0): 1e-6}) == list(range(7))
+
+
+def test_strays_behind_strays() -> None:
+    """A light pair without a way back, then the light cell that only led there, then what had led to that."""
+    flows = REGIME | {(2, 3): 1e-2, (3, 4): 1e-2, (4, 5): 1e-2, (5, 6): 1e-2, (6, 5): 1e-2, (4, 4): 1e-2}
+    assert kept(7, flows) == [0, 1, 2]
+
+
+def test_two_regimes_both_last() -> None:
+    """One of 2 percent beside one of 98, with cells that lead into both; 0.5 percent are not enough."""
+    two = {(3, 4): 1.0, (4, 3): 1.0, (5, 0): 0.1, (5, 3): 0.1, (1, 5): 1e-3}
+    assert kept(6, REGIME | two) == list(range(6))
+    light = two | {(3, 4): 0.25, (4, 3): 0.25}
+    assert kept(6, REGIME | light) == [0, 1, 2, 5]
+
+
+def test_nothing_but_light_sets_is_left_as_it_is() -> None:
+    """300 cells that each lead to themselves: none is a regime more than another, and something must be left."""
+    assert kept(300, {(i, i): 1.0 for i in range(300)}) == list(range(300))
+
+
+def test_of_rows_that_only_lead_on_none_lasts() -> None:
+    """Nor does a dead end stay because all else is light."""
+    assert kept(3, {(0, 1): 1.0, (1, 2): 1.0, (2, -1): 1.0}) == []
+    assert kept(2, {(0, -1): 1000.0, (1, 1): 1.0}) == [1]
+
+
+@pytest.mark.parametrize("part", [0.0, 0.004, 0.01, 0.03, 0.2])
+def test_random_rows_come_to_an_end(part: float) -> None:
+    """Whatever the graph: what lasts leads on to what lasts; its closed sets have weight, or all of it is light."""
+    some = False
+    for seed in range(40):
+        rng = np.random.default_rng(seed)
+        n = int(rng.integers(1, 60))
+        used = np.argwhere(rng.random((n, n)) < part)
+        flows = {(int(i), int(j)): float(w) for (i, j), w in zip(used, rng.pareto(0.3, len(used)), strict=True)}
+        flows |= {(i, -1): 1.0 for i in range(n) if rng.random() < 0.2}
+        lasts = kept(n, flows)
+        inner = {(i, j) for i, j in flows if i in lasts and j in lasts}
+        assert {i for i, _ in inner} == set(lasts)
+        closed = [cells for cells in members(chain(n, inner)) if cells[0] in lasts]
+        held = [sum(w for (i, _), w in flows.items() if i in cells) for cells in closed]
+        heavy = [h >= STRAY * sum(flows.values()) for h in held]
+        assert all(heavy) or (not any(heavy) and sum(map(len, closed)) == len(lasts))
+        some |= len(lasts) > 0
+    assert some == (part > 0.0)

@@ -8,10 +8,11 @@ from typing import Any
 import numpy as np
 import pytest
 
+from helpers.statistics import assert_agrees
 from perdure import Case
 from perdure._records import EventResult, ObservableResult
 from perdure._spectrum import ClassSolver
-from perdure._statistics import regime_numbers
+from perdure._statistics import Shift, allocation, evenness, regime_numbers, scaled
 from perdure._statistics.numbers import counted
 from perdure._transitions import TransitionMatrix
 from unit.transitions.support import tally_of
@@ -37,12 +38,21 @@ def case_of(kind: str = "flow", **more: Any) -> Case:
 
 
 def numbers(
-    case: Case, sums: np.ndarray, *, times: int = 1, n_step: int = N_STEP, centre: float = 0.0, alone: bool = False
+    case: Case,
+    sums: np.ndarray,
+    *,
+    times: int = 1,
+    n_step: int = N_STEP,
+    centre: float = 0.0,
+    alone: bool = False,
+    ladder: np.ndarray = NO_LADDER,
+    shifts: dict[str, Shift] | None = None,
 ) -> tuple[dict[str, EventResult], dict[str, ObservableResult]]:
     """Numbers of a chain of two cells with mass 1/3 and 2/3; sums (2, 2, n_sum) over 4 bursts a replicate.
 
     `times` repeats every burst; `n_step` and `centre` are those of the plan and of the observable. With `alone` the
-    regime is the first cell only: all bursts end there.
+    regime is the first cell only: all bursts end there. `ladder` are masses with coarser cells (2, 2), `shifts` changes
+    of the averages by part of the budget.
     """
     counts = np.zeros((2, 4, 2), dtype=int)
     if alone:
@@ -53,8 +63,9 @@ def numbers(
     solver = ClassSolver(transition, np.arange(1 if alone else 2))
     np.testing.assert_allclose(solver.mass, [1, 0] if alone else [1 / 3, 2 / 3])
     plan: Any = SimpleNamespace(n_step=n_step, duration=TAU)
+    found: Any = SimpleNamespace(sums=times * sums, sent=transition.tally.bursts.sum(axis=1))
     events, observables = regime_numbers(
-        case, plan, transition, solver.mass, times * sums, solver.adjoint, NO_LADDER, np.array([centre])
+        case, plan, transition, solver.mass, found, solver.adjoint, ladder, np.array([centre]), shifts or {}
     )
     return dict(events), dict(observables)
 
@@ -208,3 +219,139 @@ def test_observable_that_is_not_finite() -> None:
     assert "not finite" in observables["x"].mean.reason
     assert events["often"].share.value == pytest.approx(7 / 54)
     assert events["often"].share.error == pytest.approx(numbers(case_of(), SUMS)[0]["often"].share.error)
+
+
+def shift_of(*change: list[float], factor: float = 1.0) -> Shift:
+    """The same change of the averages, on the scale of one burst, in each of four replicates; one list per sum."""
+    return Shift(np.tile(np.concatenate(change), (4, 1)), factor)
+
+
+def test_a_step_part_is_the_change_of_every_number() -> None:
+    """Share 7/54 moved by 0.01, entries 20/27 by 0.05, the mean by 0.2: each number moves by its derivative."""
+    moved = shift_of([0.01, 0.05], [0.0, 0.0], [0.2, 0.9])
+    events, observables = numbers(case_of(), SUMS, shifts={"step": moved})
+    often, entries = events["often"], 20 / 27
+    assert often.share.parts["step"] == pytest.approx(0.01)
+    assert often.entry_rate.parts["step"] == pytest.approx(0.05 / TAU)
+    assert often.return_period.parts["step"] == pytest.approx(TAU * 0.05 / entries**2)
+    assert often.mean_spell.parts["step"] == pytest.approx(abs(0.01 * TAU / entries - 7 / 54 * TAU * 0.05 / entries**2))
+    mean = observables["x"].mean
+    assert mean.parts["step"] == pytest.approx(0.2)
+    assert observables["x"].variance.parts["step"] == pytest.approx(abs(0.9 - 2.0 * mean.value * 0.2))  # type: ignore[operator]
+    without = numbers(case_of(), SUMS)[0]["often"].share
+    assert set(without.parts) == {"sampling"}
+    assert without.parts["sampling"] == often.share.parts["sampling"]
+    assert without.value == often.share.value
+    assert often.share.low < without.low  # type: ignore[operator]
+
+
+def test_the_part_of_the_cells_joins_ladder_and_change() -> None:
+    """Masses 1/3, 1/3 - 0.04 and 1/3 - 0.12 of the first cell; shares of the cells differ by 20/72 - 4/72 = 2/9."""
+    ladder = np.array([[1 / 3 - 0.04, 2 / 3 + 0.04], [1 / 3 - 0.12, 2 / 3 + 0.12]])
+    moved = shift_of([0.01, 0.0], [0.0, 0.0], [0.0, 0.0])
+
+    def part(**more: Any) -> float:
+        return numbers(case_of(), SUMS, **more)[0]["often"].share.parts["cells"]
+
+    # the ratio 1/2 of the two differences leaves as much as the first, of which half counts
+    rest = 0.5 * 0.04 * 2 / 9
+    assert part(ladder=ladder) == pytest.approx(rest)
+    assert part(shifts={"cells": moved}) == pytest.approx(0.01)
+    assert part(ladder=ladder, shifts={"cells": moved}) == pytest.approx(np.hypot(rest, 0.01))
+
+
+@pytest.mark.parametrize(("n_step", "share", "entries"), [(10, 1 / 9, 10 / 9), (2, 1.0, 2.0), (1, 1.0, 1.0)])
+def test_scale_of_sums(n_step: int, share: float, entries: float) -> None:
+    """Sums begin with the second step: n - 1 of n; entries are carried to all n."""
+    plan: Any = SimpleNamespace(n_step=n_step)
+    found = scaled(np.ones((3, 2, 6)), plan, 2)
+    np.testing.assert_allclose(found, np.broadcast_to([share, entries, share, entries, share, share], (3, 2, 6)))
+
+
+# ------------------------------------------------------------------------- where bursts are worth most
+
+# Per step a burst from cell 0 is inside with chance 0.5, of cell 1 with 0.02; both end in either cell evenly, so that
+# the adjoint solution is flat and the error of the share is the scatter of the sums alone.
+CHANCES, N_REPLICATE = np.array([0.5, 0.02]), 400
+# Part of the bursts that goes by mass, which is even here.
+BY_MASS = 0.5
+
+
+def two_cells(sent: tuple[int, int], events: dict[str, Any] | None = None) -> tuple[Any, ...]:
+    """Arguments of `allocation` and `evenness`: bursts of one step, half of which go to either cell."""
+    case = Case(
+        title="invented",
+        system={"kind": "noisy-map", "state": ["x"], "equations": {"x": "w"}, "draws": {"w": "uniform"}},
+        events=events or {"in": {"when": "x > 0.5"}},
+    )
+    n_event = len(case.events)
+    counts = np.zeros((2, 4, N_REPLICATE), dtype=int)
+    for i in range(2):
+        counts[i, :2] = sent[i] // 2
+    rng, sums = np.random.default_rng(11), np.zeros((2, N_REPLICATE, 2 * n_event + 2))
+    for i in range(2):
+        sums[i, :, 0] = rng.binomial(sent[i], CHANCES[i], N_REPLICATE)
+        for k in range(1, n_event):
+            sums[i, :, 2 * k] = rng.binomial(sent[i], CHANCES[1 - i], N_REPLICATE)
+    transition = TransitionMatrix(tally_of(counts))
+    solver = ClassSolver(transition, np.arange(2))
+    plan: Any = SimpleNamespace(n_step=1, duration=1.0)
+    found: Any = SimpleNamespace(sums=sums, sent=transition.tally.bursts.sum(axis=1))
+    return case, plan, transition, solver.mass, found, solver.adjoint
+
+
+def deviations() -> np.ndarray:
+    """Standard deviation of what a burst of each cell finds."""
+    return np.asarray(np.sqrt(CHANCES * (1.0 - CHANCES)))
+
+
+def mixed_with_mass(share: np.ndarray) -> np.ndarray:
+    return np.asarray((1.0 - BY_MASS) * share + BY_MASS * 0.5)
+
+
+@pytest.mark.parametrize("sent", [(20, 20), (40, 10)])
+def test_allocation_is_that_of_neyman(sent: tuple[int, int]) -> None:
+    """In proportion to mass times standard deviation, and half by mass; whatever was sent before.
+
+    A variance from 399 degrees of freedom is known to 7 percent, a deviation to 3.5, and the share to less than 1.
+    """
+    share = allocation(*two_cells(sent))
+    assert share.sum() == pytest.approx(1.0, abs=1e-12)
+    neyman = deviations() / deviations().sum()
+    assert_agrees(share, mixed_with_mass(neyman), 0.005)
+    # negative control: an even split, and one in proportion to the variances
+    for wrong in (np.array([0.5, 0.5]), deviations() ** 2 / (deviations() ** 2).sum()):
+        with pytest.raises(AssertionError):
+            assert_agrees(share, mixed_with_mass(wrong), 0.005)
+
+
+def test_allocation_follows_the_numbers_wanted() -> None:
+    """Two events whose deviations are exchanged between the cells: together even, each alone at its own cell."""
+    arguments = two_cells((20, 20), {"in": {"when": "x > 0.5"}, "out": {"when": "x < 0.5"}})
+    neyman = mixed_with_mass(deviations() / deviations().sum())
+    assert_agrees(allocation(*arguments), 0.5, 0.005)
+    assert_agrees(allocation(*arguments, {("share", 0): 1.0}), neyman, 0.005)
+    assert_agrees(allocation(*arguments, {("share", 1): 1.0}), neyman[::-1], 0.005)
+    assert allocation(*arguments, {("share", 0): 9.0, ("share", 1): 1.0})[0] > 0.55
+
+
+def test_allocation_without_any_error_goes_by_mass() -> None:
+    case, plan, transition, mass, found, adjoint = two_cells((20, 20))
+    found.sums = np.ones_like(found.sums) * 10.0
+    np.testing.assert_allclose(allocation(case, plan, transition, mass, found, adjoint), mass)
+
+
+def test_evenness_is_the_gain_over_an_even_spread() -> None:
+    """J. Neyman (1934): with bursts in proportion to the deviations s the variance is (sum m s)^2 / n, evenly spread
+    sum m^2 s^2 / (n/2); 40 and 12 bursts are that proportion, to rounding.
+    """
+    s = deviations()
+    sent = (40, 12)
+    gain = evenness(*two_cells(sent))[("share", 0)]
+    variances = (s**2).sum() / np.mean(sent), (s**2 / sent).sum()
+    assert_agrees(gain, variances[0] / variances[1], 0.01)
+    assert gain > 1.2
+    assert gain == pytest.approx(2.0 * (s**2).sum() / s.sum() ** 2, rel=0.05)
+    # exactly one where they are spread evenly; below one where they go to the wrong cell (control)
+    assert evenness(*two_cells((20, 20)))[("share", 0)] == pytest.approx(1.0, rel=1e-12)
+    assert evenness(*two_cells((12, 40)))[("share", 0)] < 0.7

@@ -13,7 +13,7 @@ import h5py
 import numpy as np
 import pytest
 
-from helpers.synthetic_estimate import assert_same, make_estimate
+from helpers.synthetic_estimate import assert_same, make_estimate, make_steered
 from perdure._result import DensityFile, open_file
 from perdure._store import load, save
 from perdure.errors import DensityFileError
@@ -197,6 +197,27 @@ def test_missing_parts(path: Path, name: str, ask: str) -> None:
         getattr(opened, ask)
 
 
+@pytest.mark.parametrize(
+    ("name", "ask"),
+    [
+        ("effort/steps", "effort"),
+        ("targets/reached", "targets"),
+        ("targets/reason", "targets"),
+        ("marginals/level/mass_low", "marginals"),
+        ("marginals/level/mass_se_cells", "marginals"),
+    ],
+)
+def test_missing_parts_of_a_steered_run(tmp_path: Path, name: str, ask: str) -> None:
+    path = tmp_path / "out.h5"
+    save(make_steered(make_estimate()), path)
+    with open_file(path) as opened:
+        assert getattr(opened, ask), "nothing is missing yet"
+    with h5py.File(path, "a") as file:
+        del file[name]
+    with open_file(path) as opened, pytest.raises(DensityFileError, match=r"out\.h5, /.*cannot be read"):
+        getattr(opened, ask)
+
+
 @pytest.mark.parametrize("name", ["case", "plan", "messages", "counts", "timings", "packages"])
 @pytest.mark.parametrize("value", ["{", "1", None])
 def test_broken_attributes(path: Path, name: str, value: str | None) -> None:
@@ -281,4 +302,5 @@ def oldest(tmp_path: Path) -> Iterator[DensityFile]:
 def test_format_1_still_opens(oldest: DensityFile) -> None:
     assert_same(oldest.estimate, make_estimate(n_regime=2, side=4, seed=1))
     assert oldest.density.inside == pytest.approx(1.0)
+    assert (oldest.effort, oldest.targets, oldest.cell_bursts) == ((), (), None)
     assert (DATA / "format1.h5.gz").stat().st_size < 60_000

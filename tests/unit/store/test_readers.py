@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 import xarray
 
-from helpers.synthetic_estimate import EVENTS, make_estimate
+from helpers.synthetic_estimate import EVENTS, make_estimate, make_steered
 from perdure._records import Estimate
 from perdure._store import save
 
@@ -23,10 +23,13 @@ with warnings.catch_warnings():
 ENGINES = ["h5netcdf", "netcdf4"]
 
 
-@pytest.fixture(scope="module", params=[0, 2], ids=["leaking", "two"])
+@pytest.fixture(scope="module", params=[(0, False), (2, False), (2, True)], ids=["leaking", "two", "steered"])
 def written(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, Estimate]:
     path = tmp_path_factory.mktemp("readers") / "out.h5"
-    estimate = make_estimate(n_regime=request.param)
+    n_regime, steered = request.param
+    estimate = make_estimate(n_regime=n_regime)
+    if steered:
+        estimate = make_steered(estimate)
     save(estimate, path)
     return path, estimate
 
@@ -52,6 +55,7 @@ def test_every_group_is_there(written: tuple[Path, Estimate]) -> None:
     path, estimate = written
     expected = {"/", "/cells", "/regimes", "/density", "/marginals", "/events", "/observables", "/budget"}
     expected |= {"/matrix", "/provenance"}
+    expected |= {"/effort", "/targets"} if estimate.targets else set()
     if estimate.regimes:
         expected |= {"/marginals/level", "/marginals/phase"}
     for k in range(1, len(estimate.regimes)):
@@ -210,7 +214,7 @@ def test_layout_on_disk(written: tuple[Path, Estimate]) -> None:
     with h5py.File(path) as file:
         count = file["matrix/count"]
         assert (count.compression, count.shuffle, count.fletcher32) == ("gzip", True, True)
-        assert count.dtype == np.uint16
+        assert count.dtype == (np.float32 if estimate.targets else np.uint16)
         assert count.chunks == count.shape
         assert file["matrix/column"].dtype == np.int32
         assert file["cells/counts"].chunks is None

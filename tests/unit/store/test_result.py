@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from helpers.synthetic_estimate import EVENTS, assert_same, make_estimate
+from helpers.synthetic_estimate import EVENTS, assert_same, make_estimate, make_steered
 from perdure._records import Estimate
 from perdure._result import DensityFile, Result, open_file
 from perdure.errors import EstimateError, OutputError, UsageError
@@ -54,7 +54,7 @@ def test_properties(result: Result, estimate: Estimate) -> None:
     assert result.counts == estimate.counts
     assert result.n_cell == len(estimate.keys)
     assert result.outside_share == estimate.outside_share
-    for name in ("case", "plan", "grid", "keys", "regimes", "basins", "tally", "estimate"):
+    for name in ("case", "plan", "grid", "keys", "regimes", "basins", "tally", "effort", "targets", "estimate"):
         expected = estimate if name == "estimate" else getattr(estimate, name)
         assert_same(getattr(result, name), expected, name)
     assert repr(result) == f"{type(result).__name__}('Pegel ρ': {estimate.outcome}, {result.n_cell} cells)"
@@ -119,7 +119,11 @@ def test_to_dict_is_strict_json(result: Result, estimate: Estimate) -> None:
 
     assert json.loads(text, parse_constant=refuse) == found
     assert np.isfinite(every_number(found)).all()
-    assert list(found) == ["case", "regimes", "cells", "outside_share", "crosscheck"]
+    assert list(found) == [
+        "case", "regimes", "cells", "outside_share", "effort", "half_of_bursts", "targets", "crosscheck",
+    ]  # fmt: skip
+    assert (found["effort"], found["half_of_bursts"], found["targets"]) == ([], None, [])
+    assert found["case"]["accuracy"] == 0.05
     assert found["crosscheck"] is None
     assert found["cells"] == len(estimate.keys)
     assert found["case"]["seed"] == estimate.case.seed
@@ -152,6 +156,46 @@ def test_to_dict_of_numbers(tmp_path: Path) -> None:
     assert len(marginal["edges"]) == len(marginal["mass"]) + 1 == len(marginal["error"]) + 1
     assert sum(marginal["mass"]) + marginal["below"] + marginal["above"] == pytest.approx(1.0, abs=1e-12)
     assert marginal["unit"] == "m"
+    assert (marginal["low"], marginal["high"], marginal["parts"]) == (None, None, {})
+
+
+def test_to_dict_of_a_steered_run(tmp_path: Path) -> None:
+    estimate = make_steered(make_estimate())
+    found = Result(estimate).to_dict()
+    Result(estimate).save(tmp_path / "out.h5")
+    with open_file(tmp_path / "out.h5") as opened:
+        assert opened.to_dict() == found
+    assert found["effort"][2] == {
+        "stage": "reseeded", "sweeps": 24, "bursts": 10_000, "steps": 2_000_000, "seconds": 9.75,
+    }  # fmt: skip
+    assert found["targets"][1] == {
+        "event": EVENTS[0], "number": "return_period", "wanted": 0.02, "reached": 0.25, "met": False,
+        "reason": "the time step « half »",
+    }  # fmt: skip
+    assert found["targets"][2]["reached"] is None
+    marginal, held = found["regimes"][0]["marginals"]["level"], estimate.regimes[0].marginals["level"]
+    assert marginal["parts"] == {part: error.tolist() for part, error in held.parts.items()}
+    assert held.low is not None
+    assert marginal["low"] == held.low.tolist()
+
+
+def test_focus_is_the_least_part_of_the_cells_that_got_half_of_the_bursts() -> None:
+    estimate = make_estimate(side=8)
+    n_cell = len(estimate.keys)
+    assert n_cell == 21
+    bursts = np.full(n_cell, 10)
+    bursts[[3, 7]] = 95
+    mass = np.arange(1.0, n_cell + 1.0) / np.arange(1.0, n_cell + 1.0).sum()
+    regime = replace(estimate.regimes[0], cell=np.arange(n_cell), mass=mass)
+    result = Result(replace(estimate, regimes=(regime,), cell_bursts=bursts))
+    # 380 bursts, of which 190 from two cells: exactly half
+    assert result.focus == (2 / n_cell, (pytest.approx(mass[3] + mass[7]),))
+    bursts = bursts.copy()
+    bursts[0] += 1
+    result = Result(replace(estimate, regimes=(regime,), cell_bursts=bursts))
+    assert result.focus == (3 / n_cell, (pytest.approx(mass[3] + mass[7] + mass[0]),))
+    assert Result(estimate).focus is None
+    assert Result(replace(estimate, cell_bursts=np.zeros(n_cell, dtype=np.int64))).focus is None
 
 
 def test_results_are_pickled(tmp_path: Path) -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import json
 import pickle
 from dataclasses import replace
 from pathlib import Path
@@ -13,7 +14,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from helpers.synthetic_estimate import EVENTS, assert_same, make_estimate
+from helpers.synthetic_estimate import EVENTS, assert_same, make_estimate, make_steered
 from perdure._records import Quantity
 from perdure._store import load, open_file, save, write
 from perdure._store.layout import OPTIONS, group, put_text
@@ -26,6 +27,76 @@ def test_everything_comes_back(tmp_path: Path, n_regime: int, side: int) -> None
     estimate = make_estimate(n_regime=n_regime, side=side)
     save(estimate, tmp_path / "out.h5")
     assert_same(load(tmp_path / "out.h5"), estimate)
+
+
+@pytest.mark.parametrize("n_regime", [0, 1, 2])
+@pytest.mark.parametrize("side", [4, 32])
+def test_a_steered_run_comes_back(tmp_path: Path, n_regime: int, side: int) -> None:
+    """Parts of the marginals, weights of reseeded bursts, effort, targets, bursts by cell."""
+    estimate = make_steered(make_estimate(n_regime=n_regime, side=side))
+    digest = save(estimate, tmp_path / "out.h5")
+    again = load(tmp_path / "out.h5")
+    assert_same(again, estimate)
+    assert again.tally is not None
+    assert (again.tally.count.dtype, again.tally.bursts.dtype) == (np.float32, np.float64)
+    assert save(again, tmp_path / "again.h5") == digest
+    assert (tmp_path / "out.h5").stat().st_size < write.size_of(estimate)
+
+
+def test_what_a_plain_run_has_not_is_not_in_its_file(tmp_path: Path) -> None:
+    save(make_estimate(), tmp_path / "out.h5")
+    with h5py.File(tmp_path / "out.h5") as file:
+        assert not {"effort", "targets"} & set(file)
+        assert "bursts" not in file["cells"]
+        assert "together" not in file["matrix"].attrs
+        assert set(file["marginals/level"]) == {"level", "level_bnds", "bnds", "mass", "mass_se"}
+        assert file["matrix/bursts"].dtype == np.int64
+        assert file["matrix/count"].dtype == np.uint16
+
+
+def test_no_accuracy_is_left_out(tmp_path: Path) -> None:
+    estimate = make_estimate(side=4)
+    for accuracy in (None, 0.02):
+        changed = replace(estimate, case=replace(estimate.case, accuracy=accuracy))
+        save(changed, tmp_path / "out.h5")
+        assert load(tmp_path / "out.h5").case.accuracy == accuracy
+        with h5py.File(tmp_path / "out.h5") as file:
+            assert ("accuracy" in json.loads(file.attrs["case"])) is (accuracy is not None)
+
+
+def test_parts_of_a_marginal_stand_beside_its_masses(tmp_path: Path) -> None:
+    estimate = make_steered(make_estimate())
+    save(estimate, tmp_path / "out.h5")
+    marginal = estimate.regimes[0].marginals["level"]
+    with h5py.File(tmp_path / "out.h5") as file:
+        group = file["marginals/level"]
+        names = ["mass_low", "mass_high", "mass_se", "mass_se_sampling", "mass_se_cells", "mass_se_step"]
+        assert group["mass"].attrs["ancillary_variables"].split() == names
+        np.testing.assert_array_equal(group["mass_se_cells"][()], marginal.parts["cells"])
+        np.testing.assert_array_equal(group["mass_low"][()], marginal.low)
+        together = np.sqrt(sum(group[f"mass_se_{part}"][()] ** 2 for part in ("sampling", "cells", "step")))
+        np.testing.assert_allclose(group["mass_se"][()], together, rtol=1e-14)
+
+
+@pytest.mark.parametrize("state", [("mass_low", "mass_se_cells"), ("mass_high", "mass_se")])
+def test_components_named_like_what_stands_beside_the_masses(tmp_path: Path, state: tuple[str, str]) -> None:
+    estimate = make_steered(make_estimate(side=4, state=state))
+    save(estimate, tmp_path / "out.h5")
+    assert_same(load(tmp_path / "out.h5"), estimate)
+
+
+def test_effort_and_targets_are_tables(tmp_path: Path) -> None:
+    estimate = make_steered(make_estimate())
+    save(estimate, tmp_path / "out.h5")
+    with h5py.File(tmp_path / "out.h5") as file:
+        effort, targets = file["effort"], file["targets"]
+        assert effort["stage"].asstr()[()].tolist() == ["pilot", "cover", "reseeded", "half step"]
+        assert effort["steps"][3] == 3 * 10**12
+        assert targets["target"].asstr()[1] == f"events/{EVENTS[0]}/return_period"
+        assert targets["met"][()].tolist() == [1, 0, 0]
+        assert np.isnan(targets["reached"][2])
+        np.testing.assert_array_equal(file["cells/bursts"][()], estimate.cell_bursts)
+        assert file["matrix"].attrs["together"] == 1
 
 
 def test_comparison_notices_a_changed_bit() -> None:
@@ -162,6 +233,9 @@ def test_budget_lists_every_number(tmp_path: Path) -> None:
         assert budget["sampling"][at] == 1e-3
         at = names.index("regimes/1/observables/swing/mean")
         assert budget["value"][at] == estimate.regimes[1].observables["swing"].mean.value
+        at = names.index(f"events/{EVENTS[1]}/share")
+        assert np.isnan(budget["value"][at])
+        assert (budget["low"][at], budget["high"][at]) == (0.0, 1e-5)
         assert np.isnan(budget["total"][names.index("regimes/1/observables/swing/variance")])
 
 

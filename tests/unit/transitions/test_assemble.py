@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from types import SimpleNamespace
 from typing import Any
 
@@ -9,7 +10,7 @@ import numpy as np
 import pytest
 
 from perdure._records import BoxGrid, Tally
-from perdure._transitions import Collected, RowStore, with_outside
+from perdure._transitions import Collected, RowStore, with_outside, without
 from unit.sampling.support import plan_of
 
 N_REP, N_SLOT, N_SUM = 2, 6, 3
@@ -79,6 +80,7 @@ def test_rows_come_in_the_order_asked_for(cuts: list[int]) -> None:
     expected = blocks.counts[order][:, np.concatenate([order, [12, 13]])]
     np.testing.assert_array_equal(dense_of(found.tally), expected)
     np.testing.assert_array_equal(found.tally.bursts, np.full((12, N_REP), 10))
+    np.testing.assert_array_equal(found.sent, np.full(12, 20))
     np.testing.assert_array_equal(found.sums, blocks.sums[order])
     slots = np.zeros_like(blocks.slots)
     for i in range(12):
@@ -122,11 +124,32 @@ def test_with_outside_gives_the_outside_a_row() -> None:
     np.testing.assert_array_equal(dense_of(grown.tally), expected)
     np.testing.assert_array_equal(grown.tally.bursts[-1], [600, 600])
     np.testing.assert_array_equal(expected.sum(axis=1), grown.tally.bursts)
+    np.testing.assert_array_equal(grown.sent, [20] * 9 + [1200])
     np.testing.assert_array_equal(grown.sums[:9], before.sums)
     np.testing.assert_array_equal(grown.sums[9], row.sums[0])
     part = slice(grown.slots.pointer[9], grown.slots.pointer[10])
     np.testing.assert_array_equal(grown.slots.column[part], [2])
     np.testing.assert_array_equal(grown.slots.count[part], [[7, 8]])
+
+
+def test_cells_left_out_are_outside_for_the_others() -> None:
+    """Their rows go, with sums, marginals and bursts sent; arrivals in them are added to those outside."""
+    before, counts = collected()
+    before = replace(before, sent=np.arange(9) * 10)
+    drop = np.isin(np.arange(9), [0, 4, 8])
+    keep = np.flatnonzero(~drop)
+    kept = without(before, drop)
+    left = counts[keep]
+    expected = np.concatenate([left[:, keep], left[:, [0, 4, 8, 9]].sum(axis=1, keepdims=True), left[:, 10:]], axis=1)
+    np.testing.assert_array_equal(dense_of(kept.tally), expected)
+    np.testing.assert_array_equal(kept.sent, keep * 10)
+    np.testing.assert_array_equal(kept.sums, before.sums[keep])
+    for k, i in enumerate(keep):
+        mine = slice(kept.slots.pointer[k], kept.slots.pointer[k + 1])
+        was = slice(before.slots.pointer[i], before.slots.pointer[i + 1])
+        np.testing.assert_array_equal(kept.slots.column[mine], before.slots.column[was])
+        np.testing.assert_array_equal(kept.slots.count[mine], before.slots.count[was])
+    assert left[:, [0, 4, 8]].any()
 
 
 def test_rows_notice_another_order() -> None:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from perdure._records import BoxGrid
+from perdure._records import BoxGrid, Tally
 from perdure._spectrum import ClassSolver
 from perdure._transitions import TransitionMatrix, lumped
 from unit.transitions.support import tally_of
@@ -59,3 +59,47 @@ def test_the_outside_state_is_a_block_of_its_own() -> None:
         counts[i, (i + 1) % 9] = 2
     coarse = lumped(tally_of(counts), np.arange(9), GRID, KEYS, 2)
     np.testing.assert_array_equal(coarse.block, [0, 0, 1, 1, 2, 2, 3, 3, 4])
+
+
+def weighted(weight: np.ndarray) -> Tally:
+    """Tally of weights (n, n + 2, n_replicate), as reseeded bursts leave it."""
+    rows, column = np.nonzero(weight.any(axis=2))
+    pointer = np.concatenate([[0], np.cumsum(np.bincount(rows, minlength=len(weight)))])
+    count = weight[rows, column].astype(np.float32)
+    bursts = np.stack([np.bincount(rows, weights=part, minlength=len(weight)) for part in count.T], axis=1)
+    return Tally(pointer, column.astype(np.int32), count, bursts, together=True)
+
+
+@pytest.mark.parametrize("members", [KEYS, np.array([0, 1, 4, 6, 7])])
+def test_members_share_by_the_weight_that_they_sent(members: np.ndarray) -> None:
+    """Not evenly (negative control); the shares of a block sum to one."""
+    rng = np.random.default_rng(3)
+    weight = np.zeros((8, 10, 3))
+    weight[:, members] = rng.exponential(size=(8, len(members), 3)) * 10.0 ** rng.integers(-3, 3, (8, 1, 1))
+    coarse = lumped(weighted(weight), members, GRID, KEYS, 4)
+    sent = weight.sum(axis=(1, 2))[members]
+    block = members // 4
+    share = sent / np.bincount(block, weights=sent)[block]
+    np.testing.assert_array_equal(coarse.block, block)
+    np.testing.assert_allclose(coarse.share, share, rtol=1e-6)
+    np.testing.assert_allclose(np.bincount(block, weights=coarse.share), [1.0, 1.0], rtol=1e-14)
+    np.testing.assert_allclose(coarse.lifted(np.array([0.7, 0.3])), np.array([0.7, 0.3])[block] * share, rtol=1e-6)
+    assert np.abs(coarse.share - 1.0 / np.bincount(block)[block]).max() > 0.1
+
+
+def test_blocks_of_fluxes_have_the_mass_of_their_members() -> None:
+    """Rows weighted by the stationary mass: the chain of blocks has the mass of the blocks and gives back that of the
+    members, whatever the blocks; with rows of even weight it has not (negative control)."""
+    chain = np.random.default_rng(4).dirichlet(np.full(8, 0.4), 8)
+    exact = np.linalg.matrix_power(chain, 2000)[0]
+    weight = np.zeros((8, 10, 1))
+    weight[:, :8, 0] = exact[:, None] * chain
+
+    def lifted(weight: np.ndarray) -> np.ndarray:
+        coarse = lumped(weighted(weight), KEYS, GRID, KEYS, 4)
+        return coarse.lifted(ClassSolver(TransitionMatrix(coarse.tally), np.arange(2)).mass)
+
+    # rounding to single precision
+    np.testing.assert_allclose(lifted(weight), exact, rtol=1e-5)
+    with pytest.raises(AssertionError):
+        np.testing.assert_allclose(lifted(weight / exact[:, None, None]), exact, rtol=1e-2)

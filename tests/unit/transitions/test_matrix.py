@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from perdure._records import SlotRows
+from perdure._records import SlotRows, Tally
 from perdure._transitions import TransitionMatrix, scattered_slots
 from unit.transitions.support import dense_counts, tally_of
 
@@ -45,12 +45,36 @@ def test_rows_sum_to_one_less_the_leak(matrix: TransitionMatrix, counts: np.ndar
 
 
 def test_replicates(matrix: TransitionMatrix, counts: np.ndarray, dense: np.ndarray) -> None:
-    """Each replicate has its own row; their mean is the row of the matrix when they have equally many bursts."""
+    """Sums over the bursts of each replicate; all together, over the bursts of the cell, are the row of the matrix."""
     x = np.random.default_rng(3).standard_normal((N, 2))
-    found = matrix.replicate_right(x, 4, 11)
-    expected = np.einsum("ijr,jk->irk", counts[4:11, :N], x) / counts[4:11].sum(axis=1)[:, :, None]
-    np.testing.assert_allclose(found, expected, rtol=1e-13, atol=1e-14)
-    np.testing.assert_allclose(found.mean(axis=1), (dense @ x)[4:11], rtol=1e-13, atol=1e-14)
+    found = matrix.replicate_sums(x, 4, 11)
+    expected = np.einsum("ijr,jk->irk", counts[4:11, :N], x)
+    np.testing.assert_allclose(found, expected, rtol=1e-13, atol=1e-12)
+    whole = counts[4:11].sum(axis=(1, 2))[:, None]
+    np.testing.assert_allclose(found.sum(axis=1) / whole, (dense @ x)[4:11], rtol=1e-13, atol=1e-14)
+    # negative control: they are not means
+    means = expected / counts[4:11].sum(axis=1)[:, :, None]
+    assert np.abs(found - means).max() > 1.0
+
+
+def test_weights_in_place_of_counts(counts: np.ndarray) -> None:
+    """Single precision, replicates of uneven weight: what stays and what leaks sum to one in double precision."""
+    rng = np.random.default_rng(5)
+    weight = (counts * rng.exponential(size=(N, 1, N_REP)) * 10.0 ** rng.integers(-9, 3, (N, 1, 1))).astype(np.float32)
+    plain = tally_of(counts)
+    row = np.repeat(np.arange(N), np.diff(plain.pointer))
+    bursts = weight.sum(axis=1, dtype=float)
+    tally = Tally(plain.pointer, plain.column, weight[row, plain.column], bursts, together=True)
+    matrix, x = TransitionMatrix(tally), rng.standard_normal((N, 2))
+    whole = weight.sum(axis=2, dtype=float) / bursts.sum(axis=1)[:, None]
+    np.testing.assert_allclose(matrix.right(x), whole[:, :N] @ x, rtol=1e-12, atol=1e-13)
+    np.testing.assert_allclose(matrix.left(x), whole[:, :N].T @ x, rtol=1e-12, atol=1e-13)
+    np.testing.assert_allclose(matrix.leak(), whole[:, N:].sum(axis=1), rtol=1e-11, atol=1e-13)
+    found = matrix.replicate_sums(x, 0, N)
+    np.testing.assert_allclose(found, np.einsum("ijr,jk->irk", weight[:, :N].astype(float), x), rtol=1e-12, atol=1e-12)
+    # negative control: uneven replicates, so that the row is not the mean of their rows
+    means = np.einsum("ijr,jk->irk", weight[:, :N] / bursts[:, None, :], x).mean(axis=1)
+    assert np.abs(means - matrix.right(x)).max() > 1e-2
 
 
 def test_scatter(matrix: TransitionMatrix, counts: np.ndarray) -> None:
