@@ -5,6 +5,7 @@ Without a section: coverage of the 95 percent intervals over all reference cases
   --control     plain bursts on chaotic systems, with and without the part of the error from cell size
   --convection  the three-variable convection flow: plain, reseeded, and one long run of as many steps
   --accuracy    the cases in cases/ at three accuracies: reached or not, and at what cost
+  --crosscheck  verdicts of the crosscheck: false alarms, a wrong density, published exponents, regimes, short runs
   --truths      computes the reference values of cases/ and of the convection flow that --accuracy and --convection use
 
 Results go to standard output, progress to standard error. Exit status 0: all stated criteria hold; 1: not.
@@ -18,7 +19,7 @@ from pathlib import Path
 
 from _environment import ROOT, prepare, run
 
-SECTIONS = ("coverage", "control", "convection", "accuracy", "truths")
+SECTIONS = ("coverage", "control", "convection", "accuracy", "crosscheck", "truths")
 
 
 def parser() -> argparse.ArgumentParser:
@@ -26,7 +27,9 @@ def parser() -> argparse.ArgumentParser:
     made = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     for name in SECTIONS:
         made.add_argument("--" + name, action="store_true", help="run the section " + name)
-    made.add_argument("--seeds", metavar="N", type=positive, help="seeds of each case (coverage and control: 20)")
+    made.add_argument(
+        "--seeds", metavar="N", type=positive, help="seeds of each case (coverage, control and crosscheck: 20)"
+    )
     made.add_argument("--short", action="store_true", help="fewer seeds and cases, for a few minutes on two cores")
     made.add_argument("--cases", metavar="P01,P22", default="", help="only the cases whose names start so")
     made.add_argument("--json", metavar="FILE", help="write every comparison of the section coverage")

@@ -51,6 +51,13 @@ def accuracy(options: argparse.Namespace) -> bool:
     return accuracy_section(chosen(options, CASES), (0.05,) if options.short else (0.05, 0.02, 0.01), progress)
 
 
+def crosscheck(options: argparse.Namespace) -> bool:
+    from _verify.crosscheck import SHORT, SYSTEMS, crosscheck_section
+
+    seeds = options.seeds or (2 if options.short else 20)
+    return crosscheck_section(chosen(options, SHORT if options.short else SYSTEMS), seeds, options.short, progress)
+
+
 def truths(options: argparse.Namespace) -> bool:
     from _verify.truths import truths_section
 
@@ -81,5 +88,6 @@ SECTIONS = {
     "control": control,
     "convection": convection,
     "accuracy": accuracy,
+    "crosscheck": crosscheck,
     "truths": truths,
 }

@@ -13,7 +13,7 @@ if TYPE_CHECKING:
     from perdure import errors, systems
     from perdure._case import Case, load_case
     from perdure._density import Density
-    from perdure._pipeline import estimate
+    from perdure._pipeline import crosscheck, estimate
     from perdure._records import Budget, Quantity
     from perdure._result import Result
     from perdure._result import open_file as open
@@ -25,6 +25,7 @@ __all__ = [
     "Quantity",
     "Result",
     "__version__",
+    "crosscheck",
     "errors",
     "estimate",
     "load_case",
@@ -41,6 +42,7 @@ _HOMES = {
     "Density": ("perdure._density", "Density"),
     "Quantity": ("perdure._records", "Quantity"),
     "Result": ("perdure._result", "Result"),
+    "crosscheck": ("perdure._pipeline", "crosscheck"),
     "errors": ("perdure.errors", ""),
     "estimate": ("perdure._pipeline", "estimate"),
     "load_case": ("perdure._case", "load_case"),

@@ -13,10 +13,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from perdure._density import Density
-from perdure._plain import plain_quantity, plain_regime, plain_stage, plain_target
+from perdure._plain import plain_crosscheck, plain_quantity, plain_regime, plain_stage, plain_target
 from perdure._records import (
     BoxGrid,
     CaseRecord,
+    Crosscheck,
     Estimate,
     EventResult,
     Floats,
@@ -170,6 +171,11 @@ class Result:
         return self._held.targets
 
     @property
+    def crosscheck(self) -> Crosscheck | None:
+        """What long trajectories say; None where none were flown."""
+        return self._held.crosscheck
+
+    @property
     def command(self) -> str:
         return self._held.command
 
@@ -313,7 +319,7 @@ class Result:
             "effort": [plain_stage(stage) for stage in self.effort],
             "half_of_bursts": self._plain_focus(),
             "targets": [plain_target(target) for target in self.targets],
-            "crosscheck": None,
+            "crosscheck": None if self.crosscheck is None else plain_crosscheck(self.crosscheck),
         }
 
     def _plain_focus(self) -> dict[str, Any] | None:

@@ -7,7 +7,7 @@ import numpy as np
 __all__ = ["generator", "seed_words"]
 
 # Purposes keep their number for ever: a new purpose takes the next one, so that no old result changes.
-PURPOSES = {"bursts": 0, "pilot": 1, "sobol": 2, "signs": 3, "sample": 4, "outside": 5, "reseed": 6}
+PURPOSES = {"bursts": 0, "pilot": 1, "sobol": 2, "signs": 3, "sample": 4, "outside": 5, "reseed": 6, "crosscheck": 7}
 
 
 def sequence(seed: int, purpose: str) -> np.random.SeedSequence:

@@ -14,7 +14,7 @@ PACKAGE = Path(__file__).resolve().parents[2] / "src" / "perdure"
 
 ENGINE = {
     "_streams", "_kernels", "systems", "_partition", "_sampling", "_transitions", "_spectrum", "_statistics",
-    "_density",
+    "_density", "_crosscheck",
 }  # fmt: skip
 
 # Room -> what it may import from perdure beside itself. "perdure" is the root, which has the version.
@@ -29,6 +29,7 @@ ROOMS: dict[str, set[str]] = {
     "_transitions": {"errors", "_records", "_kernels"},
     "_spectrum": {"errors", "_records"},
     "_statistics": {"errors", "_records"},
+    "_crosscheck": {"errors", "_records", "_streams", "_kernels", "_statistics"},
     "_density": {"errors", "_records"},
     "_case": {"errors", "_records", "systems"},
     "_store": {"errors", "_records"},

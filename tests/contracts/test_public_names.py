@@ -17,6 +17,7 @@ PUBLIC = [
     "Quantity",
     "Result",
     "__version__",
+    "crosscheck",
     "errors",
     "estimate",
     "load_case",

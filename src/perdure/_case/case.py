@@ -106,6 +106,20 @@ class Case(CaseRecord):
         _fill(case, record)
         return case
 
+    @classmethod
+    def from_text(cls, text: str, *, name: str, title: str, seed: int) -> Case:
+        """A case from the text of a case file, with this seed.
+
+        Raises
+        ------
+        CaseError
+            All mistakes that could be found in one pass.
+        """
+        tables = parse_tables(text, name)
+        return cls.from_record(
+            build_case(tables, Problems(name, text), text=text, source_name=name, title=title, seed=seed)
+        )
+
     def with_parameters(self, /, **values: float) -> Case:
         """The same case with other values of some parameters; everything else, the seed too, is kept.
 

@@ -14,6 +14,7 @@ import click
 
 from perdure import __version__
 from perdure._cli.check import check
+from perdure._cli.crosscheck import crosscheck
 from perdure._cli.invocation import Invocation
 from perdure._cli.output import is_shortage, print_problems
 from perdure._cli.run import run
@@ -40,7 +41,7 @@ def cli() -> None:
     """Long-run statistics of chaotic and noisy systems, each number with an error budget."""
 
 
-for _command in (run, check, show):
+for _command in (run, check, show, crosscheck):
     cli.add_command(_command)
 
 

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING
 
 import click
 
+from perdure._cli.crosscheck import verdict_status
 from perdure._cli.invocation import verbose_option
 from perdure._cli.output import json_text, print_problems, print_text
 from perdure._cli.progress import reporter_for
@@ -36,6 +37,7 @@ MOST_WORKERS = 1024
 @click.option("--workers", type=click.IntRange(1, MOST_WORKERS), help="Threads; by default all processors.")
 @click.option("--seed", type=click.IntRange(min=0), help="Seed instead of the one in CASE.")
 @steering_options
+@click.option("--crosscheck", "checking", is_flag=True, help="Check the result against long trajectories.")
 @click.option("--json", "as_json", is_flag=True, help="Print the results as one JSON object.")
 @click.option("--quiet", is_flag=True, help="Print errors only (and the JSON object, if asked for).")
 @verbose_option
@@ -48,6 +50,7 @@ def run(
     budget_steps: float | None,
     budget_minutes: float | None,
     budget_memory: float | None,
+    checking: bool,
     as_json: bool,
     quiet: bool,
     verbose: bool,
@@ -55,8 +58,8 @@ def run(
     """Estimate the long-run statistics of CASE, a TOML file, and save its density file.
 
     Progress goes to standard error, results to standard output. Exit status: 0 done; 1 saved, but a stated
-    check failed or an accuracy was not reached; 2 wrong case or arguments; 3 interrupted or out of resources; 70 a
-    fault of perdure.
+    check failed, an accuracy was not reached or the crosscheck does not agree; 2 wrong case or arguments; 3 interrupted
+    or out of resources; 70 a fault of perdure.
     """
     target = Path(f"{case.stem}.h5") if output is None else output
     _check_target(target, case)
@@ -73,6 +76,9 @@ def run(
     sha256: str | None = None
     try:
         sha256 = result.save(target)
+        if checking:
+            # only now: a crosscheck that is interrupted leaves the file without one
+            result, sha256 = _checked(result, target, workers, quiet, shlex.join([*command, "--crosscheck"]))
     finally:
         # Also when the file could not be written: the numbers took long to get.
         if as_json:
@@ -82,6 +88,17 @@ def run(
             saved = "" if sha256 is None else f"\n\nsaved in {target} (SHA-256 {sha256})"
             print_text(results_text(result, verbose=verbose) + saved)
     return _status(result, target, quiet)
+
+
+def _checked(result: Result, target: Path, workers: int | None, quiet: bool, command: str) -> tuple[Result, str]:
+    """The result with its crosscheck, added to the file, and the SHA-256 of that."""
+    from perdure._pipeline import crosscheck
+    from perdure._store import add_crosscheck
+
+    with contextlib.closing(reporter_for(quiet=quiet)) as progress:
+        checked = crosscheck(result, workers=workers, progress=progress, command=command)
+    assert checked.crosscheck is not None, "a crosscheck that ended left a record"
+    return checked, add_crosscheck(target, checked.crosscheck)
 
 
 def _check_target(target: Path, case: Path) -> None:
@@ -104,8 +121,9 @@ def _check_target(target: Path, case: Path) -> None:
 def _status(result: Result, target: Path, quiet: bool) -> int:
     """Exit status 0 or 1; a failed check and an accuracy that was not reached are told on standard error."""
     unmet = unmet_lines(result.targets)
+    checked = 0 if result.crosscheck is None else verdict_status(result.crosscheck, quiet)
     if result.checks_passed and not unmet:
-        return 0
+        return checked
     messages = [*result.messages] if quiet and not result.checks_passed else []
     what = "an accuracy was not reached" if result.checks_passed else "a stated check failed"
     print_problems("\n".join([*messages, *unmet, f"{target} is saved, but {what} (exit status 1)"]))

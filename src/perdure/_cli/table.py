@@ -6,6 +6,7 @@ from collections.abc import Iterable, Sequence
 from typing import TYPE_CHECKING
 
 from perdure._cli.budget import covered
+from perdure._cli.comparison import summary_lines
 from perdure._cli.numbers import (
     EVENT_NUMBERS,
     PARTS,
@@ -53,6 +54,8 @@ def results_text(result: Result | DensityFile, *, verbose: bool = False) -> str:
     blocks.append([covered(result)])
     if result.targets:
         blocks.append(_targets(result.targets))
+    if result.crosscheck is not None:
+        blocks.append(summary_lines(result.crosscheck, result.time_unit))
     blocks.append(_cost(result, verbose) + _effort(result, verbose))
     if result.caution:
         blocks.append([result.caution, CAUTION])

@@ -13,6 +13,7 @@ import shutil
 import sys
 import tempfile
 from collections.abc import Callable
+from dataclasses import dataclass
 from pathlib import Path
 from types import ModuleType
 from typing import Any
@@ -22,15 +23,40 @@ import numpy as np
 
 from perdure._kernels.folders import cache_folder, numba_cache
 from perdure._kernels.generate import KernelSpec, module_source
+from perdure._kernels.trajectory import TOGETHER, trajectory_source
 
-__all__ = ["burst_kernel", "compilations"]
+__all__ = ["burst_kernel", "compilations", "trajectory_kernel"]
 
-# How often this process compiled a burst kernel (rather than loading it); read by tests.
+# How often this process compiled a generated kernel (rather than loading it); read by tests.
 compilations = {"count": 0}
 LOADED: dict[str, Callable[..., int]] = {}
 
+Kernel = Callable[..., int]
 
-def burst_kernel(spec: KernelSpec) -> Callable[..., int]:
+
+@dataclass(frozen=True)
+class Template:
+    """A kind of generated module.
+
+    Attributes
+    ----------
+    name : str
+        Begins the names of its files.
+    entry : str
+        The function to call in it.
+    source : callable
+        From a spec to the text.
+    warm : callable
+        Calls the function once, on a single lane, with arrays of the types in use.
+    """
+
+    name: str
+    entry: str
+    source: Callable[[KernelSpec], str]
+    warm: Callable[[Kernel, KernelSpec], None]
+
+
+def burst_kernel(spec: KernelSpec) -> Kernel:
     """Compiled `advance` of a spec, from memory, from disk, or compiled now.
 
     Raises
@@ -38,47 +64,63 @@ def burst_kernel(spec: KernelSpec) -> Callable[..., int]:
     TypeError
         A Python function in the spec that numba cannot compile; the message holds numba's.
     """
-    source = module_source(spec)
+    return compiled(spec, BURST)
+
+
+def trajectory_kernel(spec: KernelSpec) -> Kernel:
+    """Compiled `follow` of a spec; as `burst_kernel`."""
+    return compiled(spec, TRAJECTORY)
+
+
+def compiled(spec: KernelSpec, template: Template) -> Kernel:
+    source = template.source(spec)
     if spec.function is not None:
-        return from_function(source, spec)
+        return from_function(source, spec, template)
     key = hashlib.sha256(f"{numba.__version__}\n{source}".encode()).hexdigest()[:24]
     if key not in LOADED:
-        LOADED[key] = from_disk(source, key, spec) or from_memory(source, key, spec)
+        LOADED[key] = from_disk(source, key, spec, template) or from_memory(source, key, spec, template)
     return LOADED[key]
 
 
-def from_function(source: str, spec: KernelSpec) -> Callable[..., int]:
+def from_function(source: str, spec: KernelSpec, template: Template) -> Kernel:
     names: dict[str, Any] = {"CACHED": False}
     for name, function in (("user_function", spec.function), ("user_noise", spec.noise_function)):
         if function is not None:
             names[name] = function if hasattr(function, "py_func") else numba.njit(error_model="numpy")(function)
-    exec(compile(source, "<burst kernel>", "exec"), names)
+    exec(compile(source, f"<{template.name} kernel>", "exec"), names)
+    kernel: Kernel = names[template.entry]
     try:
-        warm(names["advance"], spec)
+        template.warm(kernel, spec)
     except numba.core.errors.NumbaError as error:
         raise TypeError(str(error)) from error
     compilations["count"] += 1
-    return names["advance"]  # type: ignore[no-any-return]
+    return kernel
 
 
-def from_memory(source: str, key: str, spec: KernelSpec) -> Callable[..., int]:
-    names: dict[str, Any] = {"CACHED": False, "__name__": f"perdure_burst_{key}"}
-    exec(compile(source, f"<burst kernel {key}>", "exec"), names)
-    warm(names["advance"], spec)
+def from_memory(source: str, key: str, spec: KernelSpec, template: Template) -> Kernel:
+    names: dict[str, Any] = {"CACHED": False, "__name__": module_name(template, key)}
+    exec(compile(source, f"<{template.name} kernel {key}>", "exec"), names)
+    kernel: Kernel = names[template.entry]
+    template.warm(kernel, spec)
     compilations["count"] += 1
-    return names["advance"]  # type: ignore[no-any-return]
+    return kernel
 
 
-def from_disk(source: str, key: str, spec: KernelSpec) -> Callable[..., int] | None:
+def module_name(template: Template, key: str) -> str:
+    return f"perdure_{template.name}_{key}"
+
+
+def from_disk(source: str, key: str, spec: KernelSpec, template: Template) -> Kernel | None:
     """Kernel through the disk cache; None if the folder cannot be used."""
     root = cache_folder()
     if root is None:
         return None
-    folder = root / f"burst_{key}"
+    folder, name = root / f"{template.name}_{key}", module_name(template, key)
     for attempt in range(2):
         try:
-            module = imported(publish(folder, source, key), key)
-            warm(module.advance, spec)
+            module = imported(publish(folder, source), name)
+            kernel = getattr(module, template.entry)
+            template.warm(kernel, spec)
         except OSError:
             return None
         except Exception:
@@ -86,27 +128,26 @@ def from_disk(source: str, key: str, spec: KernelSpec) -> Callable[..., int] | N
             if attempt:
                 raise
             shutil.rmtree(folder, ignore_errors=True)
-            sys.modules.pop(f"perdure_burst_{key}", None)
+            sys.modules.pop(name, None)
             continue
-        compilations["count"] += sum(module.advance.stats.cache_misses.values())
-        return module.advance  # type: ignore[no-any-return]
+        compilations["count"] += sum(kernel.stats.cache_misses.values())
+        return kernel  # type: ignore[no-any-return]
     return None
 
 
-def publish(folder: Path, source: str, key: str) -> Path:
-    """Write the module under its content name, whole or not at all."""
-    target = folder / f"burst_{key}.py"
+def publish(folder: Path, source: str) -> Path:
+    """Write the module under its content name, that of its folder, whole or not at all."""
+    target = folder / f"{folder.name}.py"
     folder.mkdir(parents=True, exist_ok=True)
     if not target.exists() or target.read_text(encoding="utf-8") != "CACHED = True\n" + source:
-        handle, part = tempfile.mkstemp(prefix=".burst.", dir=folder)
+        handle, part = tempfile.mkstemp(prefix=".module.", dir=folder)
         with os.fdopen(handle, "w", encoding="utf-8") as file:
             file.write("CACHED = True\n" + source)
         os.replace(part, target)
     return target
 
 
-def imported(path: Path, key: str) -> ModuleType:
-    name = f"perdure_burst_{key}"
+def imported(path: Path, name: str) -> ModuleType:
     spec = importlib.util.spec_from_file_location(name, path)
     assert spec is not None and spec.loader is not None
     module = importlib.util.module_from_spec(spec)
@@ -116,7 +157,7 @@ def imported(path: Path, key: str) -> ModuleType:
     return module
 
 
-def warm(advance: Callable[..., int], spec: KernelSpec) -> None:
+def warm_burst(advance: Kernel, spec: KernelSpec) -> None:
     """Compile (or load) for the one signature in use, on a single lane."""
     d = len(spec.state)
     advance(
@@ -132,3 +173,27 @@ def warm(advance: Callable[..., int], spec: KernelSpec) -> None:
         np.ones(d),
         52.0,
     )
+
+
+def warm_trajectory(follow: Kernel, spec: KernelSpec) -> None:
+    d = len(spec.state)
+    follow(
+        np.full((d, 1), 0.5),
+        np.zeros((spec.n_sum, 1)),
+        np.zeros((1, d, 3), dtype=np.int64),
+        np.zeros((1, d, 1)),
+        np.zeros(1, dtype=np.uint64),
+        np.ones(max(len(spec.parameters) + len(spec.observables), 1)),
+        1e-3,
+        TOGETHER,
+        TOGETHER,
+        TOGETHER,
+        np.zeros(d),
+        np.ones(d),
+        TOGETHER,
+        np.uint64(0),
+    )
+
+
+BURST = Template("burst", "advance", module_source, warm_burst)
+TRAJECTORY = Template("trajectory", "follow", trajectory_source, warm_trajectory)

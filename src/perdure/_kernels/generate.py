@@ -97,15 +97,16 @@ Draws = tuple[list[str], list[str], list[str]]
 
 
 class Rows:
-    """Hands out rows of the lane buffer."""
+    """Hands out rows of a lane buffer."""
 
-    def __init__(self, lanes: int) -> None:
+    def __init__(self, lanes: int, buffer: str = "buf") -> None:
         self.lanes = lanes
+        self.buffer = buffer
         self.count = 0
 
     def take(self, n: int = 1) -> list[str]:
         first, self.count = self.count, self.count + n
-        return [f"buf[{k * self.lanes} + lane]" for k in range(first, first + n)]
+        return [f"{self.buffer}[{k * self.lanes} + lane]" for k in range(first, first + n)]
 
 
 def indented(lines: Sequence[str], depth: int) -> list[str]:

@@ -103,6 +103,19 @@ def rk4_lines(spec: KernelSpec, normal: list[str], sign: list[str]) -> list[str]
     return lines + [f"y_{s} = x_{s} + step / 6.0 * (k1_{s} + 2.0 * (k2_{s} + k3_{s}) + k4_{s})" for s in spec.state]
 
 
+def three_eighths_lines(spec: KernelSpec, normal: list[str], sign: list[str]) -> list[str]:
+    """Runge-Kutta scheme of order 4 by the three-eighths rule (W. Kutta, Z. Math. Phys. 46 (1901) 435-453)."""
+    lines = drift_lines(spec, old_point(spec), "k1")
+    stages = (
+        "x_{s} + step / 3.0 * k1_{s}",
+        "x_{s} + step * (k2_{s} - k1_{s} / 3.0)",
+        "x_{s} + step * (k1_{s} - k2_{s} + k3_{s})",
+    )
+    for stage, point in enumerate(stages, start=2):
+        lines += drift_lines(spec, [point.format(s=s) for s in spec.state], f"k{stage}")
+    return lines + [f"y_{s} = x_{s} + step / 8.0 * (k1_{s} + 3.0 * (k2_{s} + k3_{s}) + k4_{s})" for s in spec.state]
+
+
 def kicks(spec: KernelSpec, row: int, term: str) -> str:
     """Sum over the Wiener processes that act on a row; {j} is the process, {k} the row."""
     parts = [term.format(j=j, k=row) for j in range(columns(spec)) if row in rows_of(spec, j)]
@@ -185,6 +198,7 @@ def weak2_needs(spec: KernelSpec) -> tuple[int, int]:
 SCHEMES = {
     "map": Scheme(True, no_needs, map_lines),
     "rk4": Scheme(False, no_needs, rk4_lines),
+    "three-eighths": Scheme(False, no_needs, three_eighths_lines),
     "euler-maruyama": Scheme(False, wiener_needs, euler_lines),
     "weak2": Scheme(False, weak2_needs, weak2_lines),
 }

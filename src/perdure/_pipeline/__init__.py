@@ -14,13 +14,14 @@ import perdure
 from perdure._pipeline.prepare import Prepared, prepare
 from perdure._pipeline.run import CHECK_PART, Found, Run
 from perdure._pipeline.steering import FIRST, checked_request, steered
+from perdure._pipeline.trajectories import crosscheck
 from perdure._pipeline.watch import Clock, Progress, silent
 from perdure._records import Budget, CaseRecord, Estimate, Plan, Target
 from perdure._result import Result
 from perdure._sampling import PLAIN_PART, burst_budget, kernel_for
 from perdure._statistics import no_share
 
-__all__ = ["estimate", "forecast_cost", "plan"]
+__all__ = ["crosscheck", "estimate", "forecast_cost", "plan"]
 
 
 def plan(case: CaseRecord) -> Plan:

@@ -9,39 +9,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from perdure._records.case import CaseRecord
+from perdure._records.crosscheck import Crosscheck
 from perdure._records.engine import BoxGrid, Floats, Integers, Plan, Tally
-
-
-@dataclass(frozen=True)
-class Quantity:
-    """A number with its 95 percent interval and the parts of its error.
-
-    Attributes
-    ----------
-    value, low, high : float or None
-        None where there is no number; then `reason` says why. For an event never seen `value` is None,
-        `low` 0 and `high` an upper bound.
-    parts : mapping of str to float
-        Standard errors by part of the error budget ("sampling", ...). Same unit as `value`.
-    unit : str
-        "1" where it has none.
-    reason : str
-        Empty for an ordinary number.
-    """
-
-    value: float | None
-    low: float | None
-    high: float | None
-    parts: Mapping[str, float] = field(default_factory=dict)
-    unit: str = "1"
-    reason: str = ""
-
-    @property
-    def error(self) -> float | None:
-        """Standard error: the parts added in quadrature. None without a value."""
-        if self.value is None:
-            return None
-        return float(np.sqrt(sum(part * part for part in self.parts.values())))
+from perdure._records.quantity import Quantity
 
 
 @dataclass(frozen=True)
@@ -204,6 +174,8 @@ class Estimate:
         One for each number that `accuracy` asks for; empty where nothing was steered.
     cell_bursts : ndarray of int64, shape (n_cell,), or None
         Bursts sent from each cell of `keys`.
+    crosscheck : Crosscheck or None
+        What long trajectories say; None where none were flown.
     """
 
     case: CaseRecord
@@ -225,3 +197,4 @@ class Estimate:
     effort: tuple[Stage, ...] = ()
     targets: tuple[Target, ...] = ()
     cell_bursts: Integers | None = None
+    crosscheck: Crosscheck | None = None

@@ -3,7 +3,7 @@
 from perdure._sampling.bursts import BlockRows, BurstSampler, sobol_base
 from perdure._sampling.ensemble import FIRST_SWEEP, Ensemble, Starts, WeightedRows, seeds_in
 from perdure._sampling.halving import Pairs, pairs
-from perdure._sampling.kernels import kernel_for, parameter_values, scheme_of
+from perdure._sampling.kernels import kernel_for, parameter_values, scheme_of, trajectories_for
 from perdure._sampling.outside import OutsideRow, outside_row
 from perdure._sampling.pilot import Flight, Pilot, further, survey
 from perdure._sampling.planning import (
@@ -45,4 +45,5 @@ __all__ = [
     "seeds_in",
     "sobol_base",
     "survey",
+    "trajectories_for",
 ]

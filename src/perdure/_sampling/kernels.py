@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from perdure._kernels.cache import burst_kernel
+from perdure._kernels.cache import burst_kernel, trajectory_kernel
 from perdure._kernels.generate import KernelSpec
+from perdure._kernels.trajectory import OWN_SCHEMES, steps_together
 from perdure._records import CaseRecord, Floats
 from perdure.errors import CaseError
 
-__all__ = ["kernel_for", "parameter_values", "scheme_of"]
+__all__ = ["TrajectoryKernel", "kernel_for", "parameter_values", "scheme_of", "trajectories_for"]
 
 
 def scheme_of(case: CaseRecord) -> str:
@@ -56,9 +58,39 @@ def kernel_for(case: CaseRecord, halved: bool = False) -> tuple[Callable[..., in
     ValueError
         A map is to be halved.
     """
-    spec = kernel_spec(case, halved=halved)
+    return compiled(case, kernel_spec(case, halved=halved), burst_kernel)
+
+
+@dataclass(frozen=True)
+class TrajectoryKernel:
+    """A compiled trajectory kernel, the number of its sums, its scheme, and what its steps are multiples of."""
+
+    follow: Callable[..., int]
+    n_sum: int
+    scheme: str
+    together: int
+
+
+def trajectories_for(case: CaseRecord, *, bare: bool = False) -> TrajectoryKernel:
+    """The compiled trajectory kernel; if `bare`, without events and observables.
+
+    Raises
+    ------
+    CaseError
+        A Python function that numba cannot compile.
+    """
+    spec = kernel_spec(case)
+    spec = replace(spec, scheme=OWN_SCHEMES.get(spec.scheme, spec.scheme))
+    if bare:
+        spec = replace(spec, events=(), observables=())
+    return TrajectoryKernel(*compiled(case, spec, trajectory_kernel), spec.scheme, steps_together(spec))
+
+
+def compiled(
+    case: CaseRecord, spec: KernelSpec, compiler: Callable[[KernelSpec], Callable[..., int]]
+) -> tuple[Callable[..., int], int]:
     try:
-        return burst_kernel(spec), spec.n_sum
+        return compiler(spec), spec.n_sum
     except TypeError as error:
         raise CaseError(
             f"{case.source_name}, system function: numba could not compile it; allowed: a function of floats that "

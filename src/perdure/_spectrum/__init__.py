@@ -2,6 +2,17 @@
 
 from perdure._spectrum.absorption import absorption, visits
 from perdure._spectrum.classes import Classes, closed_classes, lasting, parts_without, period_of
+from perdure._spectrum.memory import slowest
 from perdure._spectrum.solves import ClassSolver
 
-__all__ = ["ClassSolver", "Classes", "absorption", "closed_classes", "lasting", "parts_without", "period_of", "visits"]
+__all__ = [
+    "ClassSolver",
+    "Classes",
+    "absorption",
+    "closed_classes",
+    "lasting",
+    "parts_without",
+    "period_of",
+    "slowest",
+    "visits",
+]

@@ -9,14 +9,16 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from perdure._store.crosscheck import add_crosscheck
     from perdure._store.publish import check_target
     from perdure._store.read import StoredEstimate, load, open_file
     from perdure._store.write import save
 
-__all__ = ["StoredEstimate", "check_target", "load", "open_file", "save"]
+__all__ = ["StoredEstimate", "add_crosscheck", "check_target", "load", "open_file", "save"]
 
 _HOMES = {
     "StoredEstimate": "perdure._store.read",
+    "add_crosscheck": "perdure._store.crosscheck",
     "check_target": "perdure._store.publish",
     "load": "perdure._store.read",
     "open_file": "perdure._store.read",

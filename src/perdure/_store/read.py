@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from perdure._records import (
     BoxGrid,
     CaseRecord,
+    Crosscheck,
     Estimate,
     EventResult,
     Floats,
@@ -28,6 +29,7 @@ from perdure._records import (
     Tally,
     Target,
 )
+from perdure._store.crosscheck import read_crosscheck
 from perdure._store.description import case_from_json, from_json, plan_from_json
 from perdure._store.opening import check_root, opened, plain_attribute, reason_of
 from perdure._store.sections import EVENT_COLUMNS, OBSERVABLE_COLUMNS
@@ -283,6 +285,14 @@ class StoredEstimate:
                 Target(event, columns[i], float(wanted[i]), optional(reached[i]), bool(met[i]), reasons[i])
                 for i, event in enumerate(events)
             )
+
+    @cached_property
+    def crosscheck(self) -> Crosscheck | None:
+        """What long trajectories say; None where none were flown."""
+        if not self._holds("crosscheck"):
+            return None
+        with self._reading("/crosscheck"):
+            return read_crosscheck(self._group("crosscheck"))
 
     def estimate(self) -> Estimate:
         """All of it, in memory."""

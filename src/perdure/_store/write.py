@@ -125,6 +125,10 @@ def fill(file: h5py.File, estimate: Estimate) -> None:
     if estimate.targets:
         put_targets(file, estimate.targets)
     put_provenance(file, estimate)
+    if estimate.crosscheck is not None:
+        from perdure._store.crosscheck import put_crosscheck
+
+        put_crosscheck(file, estimate.crosscheck)
     attrs(file, complete=True)
 
 
@@ -199,7 +203,7 @@ def size_of(estimate: Estimate) -> int:
 
 
 @contextlib.contextmanager
-def faults_named(path: Path, estimate: Estimate) -> Iterator[None]:
+def faults_named(path: Path, estimate: object) -> Iterator[None]:
     """Nothing computed may be lost: what goes wrong inside becomes an OutputError with the estimate."""
     try:
         yield

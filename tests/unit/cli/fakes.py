@@ -9,7 +9,18 @@ from typing import Any
 
 import numpy as np
 
-from perdure._records import BoxGrid, EventResult, ObservableResult, Plan, Quantity, Regime, Stage, System, Target
+from perdure._records import (
+    BoxGrid,
+    Crosscheck,
+    EventResult,
+    ObservableResult,
+    Plan,
+    Quantity,
+    Regime,
+    Stage,
+    System,
+    Target,
+)
 
 SHA256 = "0f" * 32
 
@@ -69,6 +80,8 @@ class FakeResult:
     effort: tuple[Stage, ...] = ()
     focus: tuple[float, tuple[float, ...]] | None = None
     targets: tuple[Target, ...] = ()
+    crosscheck: Crosscheck | None = None
+    time_unit: str = "s"
     fault: Exception | None = None
     saved: list[Path] = field(default_factory=list)
 
@@ -117,7 +130,8 @@ COST = {"cells": 24, "bursts": 1536, "steps": 153600, "memory_bytes": 2.5e8, "se
 class Engine:
     """Stands in for `_case`, `_pipeline` and `_result`.
 
-    `log` lists the calls in their order, `steered` what `estimate` was given to steer the run.
+    `log` lists the calls in their order, `steered` what `estimate` was given to steer the run, `asked`
+    what `crosscheck` was given; `found` is what that finds.
     """
 
     def __init__(self) -> None:
@@ -126,6 +140,8 @@ class Engine:
         self.work: Callable[[], None] = lambda: None
         self.log: list[tuple[str, Any]] = []
         self.steered: dict[str, Any] = {}
+        self.asked: dict[str, Any] = {}
+        self.found: Crosscheck | None = None
 
     def load_case(self, path: Path, *, seed: int | None = None) -> Any:
         self.log.append(("load_case", path))
@@ -142,6 +158,15 @@ class Engine:
         progress("bursts", 3, 400)
         self.work()
         return self.result
+
+    def crosscheck(
+        self, result: Any, *, workers: int | None = None, progress: Any = None, command: str = "", **asked: Any
+    ) -> Any:
+        self.log.append(("crosscheck", (workers, command)))
+        self.asked = asked
+        progress("trajectories", 0, 400)
+        self.work()
+        return replace(self.result, crosscheck=self.found)
 
     def plan(self, case: Any) -> Plan:
         return PLAN

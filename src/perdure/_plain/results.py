@@ -1,7 +1,4 @@
-"""Results in the types that JSON has: what ``perdure show --json`` prints.
-
-Missing and infinite numbers are null.
-"""
+"""Numbers, regimes, stages and targets as plain data."""
 
 from __future__ import annotations
 
@@ -14,7 +11,7 @@ from numpy.typing import ArrayLike
 
 from perdure._records import EventResult, Floats, Marginal, ObservableResult, Quantity, Stage, Target
 
-__all__ = ["plain_quantity", "plain_regime", "plain_stage", "plain_target"]
+__all__ = ["finite", "finite_list", "plain_quantity", "plain_regime", "plain_stage", "plain_target"]
 
 
 def plain_quantity(quantity: Quantity) -> dict[str, Any]:

@@ -1,0 +1,1 @@
+"""Long trajectories from dispersed starts, compared with a density; Lyapunov exponents along them."""
