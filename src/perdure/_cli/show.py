@@ -33,7 +33,7 @@ def show(file: Path, as_json: bool, checked: bool, budget: bool, verbose: bool) 
     result = open_file(file)
     if checked and result.crosscheck is None:
         raise UsageError(
-            f"{file}: found no crosscheck in it; allowed: a file that has one; run `perdure crosscheck {file}`"
+            f"{file}: found no crosscheck in it; allowed: a file that has one; run `perdure crosscheck {file}` first"
         )
     if as_json:
         print_text(json_text(result.to_dict()))

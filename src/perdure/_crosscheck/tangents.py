@@ -46,8 +46,8 @@ class Bare:
         Unit: time.
     together : int
         Steps of a call are a multiple of this.
-    scale : ndarray, shape (n_dim,)
-        Spread of the long run. Units of the state.
+    scale, middle : ndarray, shape (n_dim,)
+        Spread of the long run, and the middle of its domain. Units of the state.
     period : ndarray, shape (n_dim,)
         0 for components that do not wrap.
     magnitude : float
@@ -61,6 +61,7 @@ class Bare:
     step: float
     together: int
     scale: Floats
+    middle: Floats
     period: Floats
     magnitude: float
     stirred: bool
@@ -108,7 +109,7 @@ class Bare:
         never = n_step + 1
         self.follow(
             flat, np.zeros((0, copies * n)), counts, np.empty((0, n_dim, copies * n)), words, self.parameters,
-            self.step, n_step, never, never, np.zeros(n_dim), np.ones(n_dim), never, np.uint64(0),
+            self.step, n_step, never, never, self.middle - 0.5, np.ones(n_dim), never, np.uint64(0),
         )  # fmt: skip
 
     def no_counts(self, n: int) -> Integers:

@@ -8,9 +8,10 @@ A few steps are made, each into rows of its own; then one loop over lanes goes t
 adds to the sums, which stay in registers meanwhile. The counters of a few events share a 64-bit word. Both save stores,
 of which a core makes fewest.
 
-In binary arithmetic a map that doubles ends at 0, and long orbits of other maps close into cycles that the map does not
-have. So the low bits of the states can be drawn anew now and then. The magnitude does not grow by it: beyond the end of
-the long run, often a power of two, states may lead away.
+Binary arithmetic does what a map without noise does not: a rounded state hits an unstable point and stays there (the
+logistic map goes 0.5, 1, 0), long orbits close into cycles, a map that doubles ends at 0. So at every step a state
+moves by a random part, at most 2^-49, of its way to the middle of the histograms, inwards at either end of the long
+run; and the low bits of maps that lose bits can be drawn anew.
 """
 
 from __future__ import annotations
@@ -35,6 +36,7 @@ TRAJECTORY_VERSION = 1
 OWN_SCHEMES = {"rk4": "three-eighths"}
 # Steps whose states are tested in one go. Even, since normal draws come in pairs.
 TOGETHER = 8
+STIR = 2.0**-49
 # Events that share a word, and the bits of the counter of each: they bound the steps of a call.
 PACKED, FIELD = 3, 21
 MOST_STEPS = 2**FIELD - TOGETHER
@@ -44,6 +46,11 @@ def steps_together(spec: KernelSpec) -> int:
     """The steps of a call, and those between two points of its histograms and samples, must be multiples of this."""
     tested = bool(spec.events or spec.observables)
     return TOGETHER if tested else random_layout(spec)[3]
+
+
+def is_stirred(spec: KernelSpec) -> bool:
+    """Whether states are moved against what rounding does."""
+    return spec.is_map and not spec.draws
 
 
 def stir_lines(spec: KernelSpec, state: list[str]) -> list[str]:
@@ -69,6 +76,10 @@ def step_body(spec: KernelSpec, old: list[str], new: list[str], draws: Draws) ->
     spare, loose = iter(normal[n_wiener:]), iter(uniform)
     lines += [f"v_{name} = {next(spare) if law == 'normal' else next(loose)}" for name, law in spec.draws]
     lines += step_lines(spec, normal[:n_wiener], sign)
+    if is_stirred(spec):
+        word = ", ".join(f"{k * spec.lanes} + lane" for k in range(4))
+        lines.append(f"stir = {STIR!r} * unit_open(next_bits(words, {word}))")
+        lines += [f"y_{s} = y_{s} + stir * (middle_{s} - y_{s})" for s in spec.state]
     for s, low, period in spec.periodic:
         lines.append(f"y_{s} = y_{s} - {period!r} * np.floor((y_{s} - {low!r}) / {period!r})")
     return lines + [f"{row} = y_{s}" for s, row in zip(spec.state, new, strict=True)]
@@ -133,7 +144,9 @@ def trajectory_source(spec: KernelSpec) -> str:
         load.append(f"{words[k // PACKED][0]} += np.int64({1 << FIELD * (k % PACKED)}) if {condition} else np.int64(0)")
     load += [f"{row} = 0.0" for row in sums]
     go: list[str] = []
-    stirs = stir_lines(spec, last) if spec.is_map and not spec.draws else []
+    stirs = stir_lines(spec, last) if is_stirred(spec) else []
+    if stirs:
+        constants += [f"middle_{s} = lower[{k}] + 0.5 * (n_slot - 2.0) / scale[{k}]" for k, s in enumerate(spec.state)]
     if random or stirs:
         constants.append(f"words = np.zeros({4 * lanes}, dtype=np.uint64)")
         load += seed_lines(spec, "stream[source]", "words")
@@ -174,9 +187,9 @@ def trajectory_source(spec: KernelSpec) -> str:
         "@njit(cache=CACHED, **LANE_OPTIONS)",
         "def follow(state, sums, counts, samples, stream, parameters, step, n_step, stride, every, lower, scale,"
         " stir_every, stirred):",
-        *indented(constants, 1),
         "    lost = 0",
         "    n_lane, n_slot = state.shape[1], counts.shape[2]",
+        *indented(constants, 1),
         f"    for first in range(0, n_lane, {lanes}):",
         f"        used = min({lanes}, n_lane - first)",
         f"        for lane in range({lanes}):",

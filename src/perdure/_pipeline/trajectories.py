@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import os
 import time
+from collections.abc import Callable
 from dataclasses import replace
 from datetime import UTC, datetime
 
@@ -65,9 +66,8 @@ SETTLE, STRIDE, EVERY = 64, 32, 256
 TANGENT_STEPS, SHARP = 6e8, 1e-3
 # Most components of a state that exponents are computed for.
 MOST_EXPONENTS = 64
-# Low bits drawn anew: of a map that loses bits, 8 in as many steps and as many more as a state near 0 has zeros in
-# front; of others so seldom that what it does at sharp ends of the long run does not matter.
-LOSING, SELDOM = Stir(8, 24), Stir(8192, 16)
+# Low bits drawn anew of a map that loses them: 8 in as many steps, and as many more as a state near 0 has zeros ahead.
+LOSING = Stir(8, 24)
 # States, and steps in which a map that loses bits brings them together.
 N_TRIED, FORGETS_IN = 256, 512
 # Steps of a burst up to which each is summed by itself.
@@ -238,6 +238,7 @@ class Work:
             step=self.step,
             together=self.plain.together,
             scale=scale,
+            middle=0.5 * (self.lower + self.upper),
             period=self.period,
             magnitude=float(np.max(middle / scale)),
             stirred=self.stir.bits == LOSING.bits,
@@ -278,18 +279,22 @@ class Work:
             setting.called(state, min(65536, n_step - at), self.rng, counts, 0)
         return state
 
-    def stirring(self) -> Stir:
-        """How often low bits are drawn anew: of maps that lose bits in every step always, of other maps now and then.
+    @property
+    def burst_kernel(self) -> tuple[Callable[..., int], Floats, int]:
+        """What a flight of bursts is made of: kernel, parameters, number of sums."""
+        advance, n_sum = kernel_for(self.case)
+        return advance, parameter_values(self.case, self.centres), n_sum
 
-        A map loses bits if most of many states come together in a few hundred steps.
-        """
+    def stirring(self) -> Stir:
+        """Whether low bits are drawn anew: of a map that brings most of many states together in a few hundred steps."""
         if self.case.system.kind != "map":
             return Stir(self.every, 0)
         begin = self.rng.uniform(self.lower[:, None], self.upper[:, None], (len(self.lower), N_TRIED))
-        end = self.fly(begin, 1.0, FORGETS_IN)
+        # by the kernel of the bursts, which does nothing against it
+        end = BurstFlight(*self.burst_kernel, self.rng).fly(begin, 1.0, FORGETS_IN)
         end = end[:, np.isfinite(end).all(axis=0)]
         loses = np.unique(end, axis=1).shape[1] < 0.5 * end.shape[1]
-        return Stir(self.full.together, LOSING.bits) if loses else Stir(SELDOM.every, SELDOM.bits)
+        return LOSING if loses else Stir(LOSING.every, 0)
 
     # -------------------------------------------------------------------------------------- work
 
@@ -396,8 +401,7 @@ class Work:
         corner = grid.lower + grid.indices(held.keys[cell]) * grid.width
         place = self.draws.random((grid.n_dim, len(cell), n_point))
         begin = (corner.T[:, :, None] + place * grid.width[:, None, None]).reshape(grid.n_dim, -1)
-        advance, n_sum = kernel_for(self.case)
-        flight = BurstFlight(advance, parameter_values(self.case, self.centres), n_sum, self.draws)
+        flight = BurstFlight(*self.burst_kernel, self.draws)
         rows = [2 * k for k in range(len(self.case.events) + len(self.case.observables))]
         if plan.n_step > FEW_STEPS:
             # the kernel leaves the first step of a burst out of its sums

@@ -20,7 +20,8 @@ def plain_crosscheck(found: Crosscheck) -> dict[str, Any]:
         "level": finite(found.level),
         "messages": list(found.messages),
         **(regimes[0] if regimes else {}),
-        "starts": {name: finite(v) if isinstance(v, float) else v for name, v in asdict(found.starts).items()},
+        "starts": {name: finite(v) if isinstance(v, float) else v for name, v in asdict(found.starts).items()}
+        | {"in_regime": list(found.starts.in_regime)},
         "cells": plain_distance(found.cells),
         "memory": plain_quantity(found.memory),
         "trajectories": {

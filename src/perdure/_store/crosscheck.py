@@ -54,11 +54,13 @@ def put_crosscheck(file: h5py.File, found: Crosscheck) -> None:
     put_distance(made, "cells_total_variation", found.cells, "total variation distance of the cells' masses", "1")
     label = "time in which the slowest mode of the matrix fades by e"
     put_quantities(made, "memory", [found.memory], (), long_name=label)
-    put_comparisons(made, found.comparisons)
-    marginals = group(made, "marginals", long_name="marginals of the trajectories, beside those of the density")
-    for row in found.marginals:
-        place = marginals if row.regime == 0 else marginals.require_group(f"regime {row.regime}")
-        put_marginal(place, row)
+    put_comparisons(made, found.comparisons, found.memory.unit)
+    marginals = group(made, "marginals", long_name="marginals of the trajectories, by regime")
+    for regime in dict.fromkeys(row.regime for row in found.marginals):
+        place = group(marginals, str(regime), long_name=f"regime {regime}")
+        for row in found.marginals:
+            if row.regime == regime:
+                put_marginal(place, row)
     told = group(made, "predictability", long_name="Lyapunov exponents and what follows from them, by regime")
     for item in found.predictability:
         put_predictability(told, item)
@@ -70,7 +72,7 @@ def put_distance(parent: h5py.Group, name: str, distance: Distance, label: str, 
     put(parent, f"{name}_expected", np.float64(distance.expected), (), units=unit, long_name=expected)
 
 
-def put_comparisons(made: h5py.Group, rows: tuple[Comparison, ...]) -> None:
+def put_comparisons(made: h5py.Group, rows: tuple[Comparison, ...], time_unit: str) -> None:
     """A row per number."""
     dims = ("comparison",)
     places = [f"{'' if c.regime == 0 else f'regimes/{c.regime}/'}{c.subject}s/{c.name}/{c.number}" for c in rows]
@@ -87,10 +89,11 @@ def put_comparisons(made: h5py.Group, rows: tuple[Comparison, ...]) -> None:
         "length": ([c.length for c in rows], "length of each trajectory that would do"),
     }
     for kind in EFFECTIVE:
-        values = [c.effective.get(kind) for c in rows]
-        columns[f"effective_{kind.replace(' ', '_')}"] = (values, f"effective sample size by {kind}")
+        sizes = [c.effective.get(kind) for c in rows]
+        columns[f"effective_{kind.replace(' ', '_')}"] = (sizes, f"effective sample size by {kind}")
     for name, (column, label) in columns.items():
-        put(made, name, np.array([np.nan if v is None else v for v in column], dtype=float), dims, long_name=label)
+        values = np.array([np.nan if v is None else v for v in column], dtype=float)
+        put(made, name, values, dims, units=time_unit if name == "length" else "1", long_name=label)
     put_text(made, "verdict", [c.verdict for c in rows], dims, long_name="verdict on the number")
     put_text(made, "reason", [c.reason for c in rows], dims, long_name="reason of the verdict; may be empty")
 
@@ -110,7 +113,8 @@ def put_marginal(parent: h5py.Group, row: MarginalComparison) -> None:
 
 
 def put_predictability(parent: h5py.Group, item: Predictability) -> None:
-    made = group(parent, f"regime {item.regime}", verdict=item.verdict, hypotheses=to_json(item.hypotheses))
+    made = group(parent, str(item.regime), long_name=f"regime {item.regime}", verdict=item.verdict)
+    attrs(made, hypotheses=to_json(item.hypotheses))
     attrs(made, distance=np.nan if item.distance is None else float(item.distance), regime=np.int32(item.regime))
     axis = np.arange(1, len(item.exponents) + 1, dtype=np.int32)
     put(made, "exponent", axis, ("exponent",), units="1", long_name="number of the exponent, largest first")
@@ -175,10 +179,7 @@ def read_comparisons(made: h5py.Group) -> Iterator[Comparison]:
 
 
 def read_marginals(made: h5py.Group) -> Iterator[MarginalComparison]:
-    for inner in made.values():
-        if "component" not in inner.attrs:
-            yield from read_marginals(inner)
-            continue
+    for inner in (inner for place in made.values() for inner in place.values()):
         (axis,) = (v for v in inner if "bounds" in inner[v].attrs)
         bounds = inner[inner[axis].attrs["bounds"]][()]
         yield MarginalComparison(

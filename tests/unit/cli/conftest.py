@@ -17,7 +17,7 @@ def engine(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> Engine:
     fake = Engine()
     parts = {
         "perdure._case": ("load_case",),
-        "perdure._pipeline": ("estimate", "plan", "forecast_cost"),
+        "perdure._pipeline": ("crosscheck", "estimate", "plan", "forecast_cost"),
         "perdure._result": ("open_file",),
     }
     for name, functions in parts.items():

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import warnings
 from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 
 import h5py
@@ -11,6 +12,7 @@ import numpy as np
 import pytest
 import xarray
 
+from helpers.synthetic_crosscheck import make_crosscheck
 from helpers.synthetic_estimate import EVENTS, make_estimate, make_steered
 from perdure._records import Estimate
 from perdure._store import save
@@ -29,7 +31,7 @@ def written(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFac
     n_regime, steered = request.param
     estimate = make_estimate(n_regime=n_regime)
     if steered:
-        estimate = make_steered(estimate)
+        estimate = replace(make_steered(estimate), crosscheck=make_crosscheck(n_regime=n_regime))
     save(estimate, path)
     return path, estimate
 
@@ -58,6 +60,11 @@ def test_every_group_is_there(written: tuple[Path, Estimate]) -> None:
     expected |= {"/effort", "/targets"} if estimate.targets else set()
     if estimate.regimes:
         expected |= {"/marginals/level", "/marginals/phase"}
+    if estimate.crosscheck is not None:
+        expected |= {"/crosscheck", "/crosscheck/marginals", "/crosscheck/predictability"}
+        for k in range(len(estimate.regimes)):
+            expected |= {f"/crosscheck/predictability/{k}", f"/crosscheck/marginals/{k}"}
+            expected |= {f"/crosscheck/marginals/{k}/{name}" for name in ("level", "mass")}
     for k in range(1, len(estimate.regimes)):
         parts = (
             "",
