@@ -27,7 +27,7 @@ from numba import njit
 from perdure import Case
 from perdure._partition import Boxes
 from perdure._records import BoxGrid, Plan
-from perdure._sampling import BurstSampler, kernel_for, parameter_values, sobol_base
+from perdure._sampling import BurstSampler, kernel_for, parameter_values, sobol_base, trajectories_for
 from perdure._streams import seed_words
 
 STEP = 0.005
@@ -39,6 +39,7 @@ ONE_BY_ONE = "a C loop (gcc -O3 -march=native), one trajectory at a time, withou
 IN_LANES = "a C loop (gcc -O3 -march=native) over 64 trajectories held as arrays, without events or tallies"
 NUMPY_LOOP = "a numba loop over one trajectory at a time that calls numpy's normal generator at every step"
 BARE = "a bare Python process"
+BARE_TRAJECTORIES = "the same kernel and scheme without events and tallies"
 TALLY = "one Runge-Kutta step of the sampler without events: the ratio is steps per burst"
 
 
@@ -282,6 +283,36 @@ def bench_noisy(repeats: int, folder: Path) -> list[Line]:
     return [line("noisy", n * n_step / best["kernel"], "steps/s", yardstick, 2.0)]
 
 
+def bench_trajectories(repeats: int, folder: Path) -> list[Line]:
+    """Steps of the long trajectories of a crosscheck: three events tested at every step, marginals tallied."""
+    case = convection_case(True)
+    n, n_step, stride = 256, 16384, 32
+    lower, width = np.array([-22.0, -30.0, 0.0]), np.array([44.0, 60.0, 52.0])
+    start = np.random.default_rng(4).uniform(1.0, 9.0, (3, n)) + np.array([[0.0], [0.0], [15.0]])
+    words = np.arange(n, dtype=np.uint64)
+
+    def work(bare: bool) -> Callable[[], float]:
+        kernel = trajectories_for(case, bare=bare)
+        counts = np.zeros((n, 3, 52), dtype=np.int64)
+        samples = np.empty((0 if bare else n_step // 256, 3, n))
+        sums, every = np.zeros((kernel.n_sum, n)), n_step + 1 if bare else stride
+
+        def run() -> float:
+            state = start.copy()
+            return clocked(
+                lambda: kernel.follow(
+                    state, sums, counts, samples, words, parameter_values(case), STEP, n_step, every, 256,
+                    lower, 50.0 / width, n_step + 1, np.uint64(0),
+                )
+            )  # fmt: skip
+
+        return run
+
+    best = least({"bare": work(True), "full": work(False)}, repeats)
+    yardstick = (BARE_TRAJECTORIES, n * n_step / best["bare"])
+    return [line("trajectories, three events, marginals", n * n_step / best["full"], "steps/s", yardstick, 0.6)]
+
+
 def bench_tally(repeats: int, folder: Path) -> list[Line]:
     """Everything of a burst but its steps: seed, stream, cell of the end, counts, sums, marginals."""
     bare, full = Run(False, False), Run(True, True)
@@ -310,7 +341,13 @@ def bench_start(repeats: int, folder: Path) -> list[Line]:
     ]
 
 
-BENCHES = {"flow": bench_flow, "noisy": bench_noisy, "tally": bench_tally, "start": bench_start}
+BENCHES = {
+    "flow": bench_flow,
+    "noisy": bench_noisy,
+    "trajectories": bench_trajectories,
+    "tally": bench_tally,
+    "start": bench_start,
+}
 
 
 def shown(lines: list[Line]) -> str:
