@@ -1,88 +1,32 @@
-"""The crosscheck as a whole: trajectories until they are sharp enough, verdicts, and what the starts say."""
+"""The verdicts of a crosscheck, number by number and overall."""
 
 from __future__ import annotations
 
-import math
-import time
-from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from perdure._crosscheck.flight import N_PART, N_SLICE, Flight
-from perdure._crosscheck.marginals import FINE as MARGINAL_FINE
-from perdure._crosscheck.marginals import MarginalFound, cell_distance, marginal_found, marginal_judged
-from perdure._crosscheck.numbers import Named, numbers_of, units_of
-from perdure._crosscheck.starts import Dispersed, ended, orders_differ
-from perdure._crosscheck.verdicts import Judged, holm, judged, uneven, weighed
+from perdure._crosscheck.alike import FORGETS, starts_of
+from perdure._crosscheck.evidence import Evidence, Matrix, Request
+from perdure._crosscheck.flight import N_PART
+from perdure._crosscheck.marginals import cell_distance, marginal_judged
+from perdure._crosscheck.starts import Dispersed
+from perdure._crosscheck.verdicts import Judged, holm, judged, uneven
 from perdure._records import (
     AGREES,
     DISAGREES,
     TOO_SHORT,
-    CaseRecord,
     Comparison,
     Distance,
-    Floats,
     Integers,
     MarginalComparison,
-    Quantity,
-    Regime,
     Starts,
 )
 
-__all__ = ["Checked", "Matrix", "Request", "checked", "flown"]
+__all__ = ["Checked", "checked"]
 
-N_BATCH = 8
-# Memory times that a trajectory must be long for its starts to be forgotten, and beyond which starts that still
-# differ are no longer a matter of length.
-FORGETS, LONG = 16.0, 30.0
-# Variance between starts over that along them, per batch, from which starts stay where they are.
-APART = 4.0
-# The flight goes on until its errors are this part of those that are sharp enough.
-SHARPER = 0.5
 # Two effective sample sizes disagree beyond this factor.
 FACTOR = 4.0
-
-Progress = Callable[[int, int], None]
-
-
-@dataclass(frozen=True)
-class Request:
-    """How far to go.
-
-    Attributes
-    ----------
-    length : int or None
-        Steps of each trajectory, the dropped part included; None: until they are sharp enough.
-    limit : float
-        Most steps of all trajectories.
-    seconds : float
-        Most time on the clock.
-    level : float
-        Chance of any "disagrees" where both sides are right.
-    """
-
-    length: int | None
-    limit: float
-    seconds: float
-    level: float
-
-
-@dataclass(frozen=True)
-class Matrix:
-    """What the transition matrix says of long trajectories.
-
-    Attributes
-    ----------
-    memory : Quantity
-        Time in which the slowest mode fades by e.
-    variance : mapping
-        By regime, subject and name: variance of the mean along a trajectory times its length. Unit: that of the
-        number squared, times time.
-    """
-
-    memory: Quantity
-    variance: Mapping[tuple[int, str, str], float] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)
@@ -95,87 +39,6 @@ class Checked:
     marginals: tuple[MarginalComparison, ...]
     cells: Distance
     starts: Starts
-    lanes: tuple[Integers, ...]
-
-
-class Evidence:
-    """The numbers of a flight beside those of the regimes, weighed but not yet judged."""
-
-    def __init__(self, case: CaseRecord, regimes: tuple[Regime, ...], flight: Flight, centres: Floats) -> None:
-        setting = flight.setting
-        self.case, self.regimes, self.flight = case, regimes, flight
-        self.batches = flight.kept(N_BATCH)
-        alive = np.isfinite(flight.state).all(axis=0)
-        last, self.moved = ended(setting.grid, setting.keys, [r.cell for r in regimes], flight.stands[1:])
-        self.last = np.where(alive, last, -1)
-        if len(regimes) == 1:
-            self.last = np.where(alive, 0, -1)
-        self.lanes = tuple(np.flatnonzero(self.last == r) for r in range(len(regimes)))
-        self.units = [units_of(lanes, flight.n // 2) for lanes in self.lanes]
-        self.named: list[tuple[int, Named]] = []
-        for r, regime in enumerate(regimes):
-            numbers = numbers_of(case, regime, self.batches, self.units[r], setting.step, centres)
-            self.named += [(r, named) for named in numbers]
-        kept = flight.steps * (1.0 - 1.0 / N_PART) * setting.step
-        self.weighed = [weighed(named, self.visits(r, named, kept)) for r, named in self.named]
-
-    def visits(self, regime: int, named: Named, kept: float) -> float:
-        """Visits to an event that its density lets expect in the trajectories; without an entry rate a guess."""
-        if named.subject != "event":
-            return math.inf
-        event, total = self.regimes[regime].events[named.name], kept * len(self.lanes[regime])
-        if event.entry_rate.value is not None:
-            return event.entry_rate.value * total
-        return (event.share.value or 0.0) * total / (16.0 * self.flight.setting.step * self.flight.setting.stride)
-
-    @property
-    def sharp(self) -> bool:
-        """Whether every number of the trajectories is as sharp as that of the density, and no start differs."""
-        chance = 0.05 / max(len(self.named), 1)
-        fine = all(w.p_value is None or w.own <= SHARPER * w.wanted for w in self.weighed)
-        if not fine or any(uneven(named.found, chance) for _, named in self.named):
-            return False
-        return all(m.own <= max(m.other, MARGINAL_FINE) for _, m in self.marginals(np.random.default_rng(0)))
-
-    def marginals(self, rng: np.random.Generator) -> list[tuple[int, MarginalFound]]:
-        """Marginals of every regime that two starts or more ended in."""
-        counts = self.flight.kept_counts()
-        return [
-            (r, marginal_found(name, regime.marginals[name], counts[:, k], self.units[r], rng))
-            for r, regime in enumerate(self.regimes)
-            if len(self.units[r]) >= 2
-            for k, name in enumerate(self.case.system.state)
-            if name in regime.marginals
-        ]
-
-
-def flown(
-    case: CaseRecord,
-    regimes: tuple[Regime, ...],
-    flight: Flight,
-    centres: Floats,
-    request: Request,
-    progress: Progress,
-) -> Evidence:
-    """Fly until the numbers are sharp enough, or as far as the request allows."""
-    every, n = flight.setting.every, flight.n
-    begun = time.monotonic()
-    if request.length is not None:
-        length, most = request.length // N_SLICE, request.length
-    else:
-        most = max(int(request.limit / n), N_SLICE * every)
-        length = max(most // 16 // N_SLICE // every, 1) * every
-    total = max(1, int(most * n / 1e6))
-    while True:
-        before = flight.steps
-        flight.extend(length, lambda k: progress(min(int(flight.length * k * n / 1e6), total), total))
-        evidence = Evidence(case, regimes, flight, centres)
-        if request.length is not None or evidence.sharp or 2 * flight.steps > most:
-            return evidence
-        spent = time.monotonic() - begun
-        # the next flight takes as many steps as all before
-        if spent * (1.0 + flight.steps / max(flight.steps - before / 2, 1)) > request.seconds:
-            return evidence
 
 
 def checked(
@@ -236,7 +99,7 @@ def checked(
         cells = cell_distance(visits, mass)
     else:
         cells = regime_cells(evidence, visits)
-    made = Checked(verdict, messages, tuple(comparisons), tuple(judged_marginals), cells, starts, evidence.lanes)
+    made = Checked(verdict, messages, tuple(comparisons), tuple(judged_marginals), cells, starts)
     return made, refused_volumes
 
 
@@ -298,86 +161,6 @@ def with_periods(comparisons: list[Comparison]) -> list[Comparison]:
             item = replace(item, verdict=rate.verdict, reason=rate.reason, length=rate.length)
         made.append(item)
     return made
-
-
-def label(regime: int, n_regime: int, named: Named) -> str:
-    place = f"regime {regime + 1}, " if n_regime > 1 else ""
-    return f"{place}{named.name}, {named.number.replace('_', ' ')}"
-
-
-def starts_of(evidence: Evidence, chance: float, matrix: Matrix, begun: Dispersed) -> Starts:
-    """What the starts say: alike, several regimes, or too short a run."""
-    flight, n_regime = evidence.flight, len(evidence.regimes)
-    found = [(named.found.ratio, named.found.ratio_p, r, named) for r, named in evidence.named]
-    ratio, p_value, regime, worst = max(found, key=lambda item: item[0]) if found else (1.0, 1.0, 0, None)
-    unlike = [named for _, named in evidence.named if uneven(named.found, chance)]
-    visits = flight.kept_visits()
-    state, n_start = flight.state, flight.n // 2
-    width = flight.setting.axis_upper - flight.setting.axis_lower
-    gap = np.abs(state[:, :n_start] - state[:, n_start:]) / width[:, None]
-    # unrelated states: each with the next start
-    typical = np.abs(state[:, :n_start] - np.roll(state[:, :n_start], 1, axis=1)) / width[:, None]
-    alive = np.isfinite(gap).all(axis=0)
-    typical = typical[:, np.isfinite(typical).all(axis=0)].max(axis=0)
-    far = 1e-3 * float(np.median(typical)) if len(typical) else 0.0
-    counts = [len(lanes) for lanes in evidence.lanes]
-    return Starts(
-        n_tried=begun.n_tried,
-        n_lost=begun.n_lost + int((~np.isfinite(state).all(axis=0)).sum()),
-        n_trajectory=flight.n,
-        twins_apart=float(np.mean(gap[:, alive].max(axis=0) > far)) if alive.any() else 0.0,
-        orders_differ=orders_differ(evidence.batches, len(evidence.case.events), n_start),
-        equal=not unlike,
-        worst="" if worst is None else label(regime, n_regime, worst),
-        ratio=float(ratio),
-        p_value=float(p_value),
-        in_regime=(*counts, flight.n - sum(counts)),
-        moved=int(evidence.moved.sum()),
-        elsewhere=float(visits[:, -1].sum() / max(visits.sum(), 1)),
-        message=starts_message(evidence, unlike, matrix, counts),
-    )
-
-
-def stays_apart(named: Named) -> bool:
-    """Whether a number differs between starts so much that no start has been where another is."""
-    return named.found.ratio > APART * N_BATCH
-
-
-def starts_message(evidence: Evidence, unlike: list[Named], matrix: Matrix, counts: list[int]) -> str:
-    """A sentence on the starts: what they show, which cause is likelier, what to do."""
-    flight = evidence.flight
-    kept = flight.steps * (1.0 - 1.0 / N_PART) * flight.setting.step
-    told = []
-    if len(counts) > 1:
-        ends = ", ".join(f"{n} in regime {k}" for k, n in enumerate(counts, 1))
-        told.append(f"several regimes, as the density says: of {flight.n} trajectories {ends}")
-        if evidence.moved.any():
-            told.append(
-                f"{int(evidence.moved.sum())} passed from one regime to another, which closed regimes do not allow: "
-                "they are one slow regime; run again with longer bursts or smaller cells"
-            )
-    if not unlike:
-        told.append("starts are alike" + (" within each regime" if len(counts) > 1 else ""))
-        return "; ".join(told)
-    memory, name = matrix.memory.value, unlike[0].name
-    apart = any(stays_apart(named) for named in unlike)
-    if apart and memory is not None and kept > LONG * memory:
-        told.append(
-            f"starts differ ({name}) and stay apart for {kept / memory:.2g} memory times of the matrix: likelier a "
-            "second regime that the density has not; look at where the starts end, and give [cells] lower and upper so "
-            "that the pilot starts in both"
-        )
-    elif memory is None:
-        told.append(
-            f"starts differ ({name}): the run is too short, or there is more than one regime; fly longer to tell"
-        )
-    else:
-        need = FORGETS * memory / (1.0 - 1.0 / N_PART)
-        told.append(
-            f"starts differ ({name}), and each trajectory is {kept / memory:.2g} memory times of the matrix long: "
-            f"likelier too short a run than several regimes; trajectories of {max(need, 2 * kept):.3g} would tell"
-        )
-    return "; ".join(told)
 
 
 def overall(
