@@ -10,7 +10,8 @@ from _environment import prepare, run
 
 # pytest last: its summary closes the output.
 CHECKS = (("ruff", "check", "."), ("ruff", "format", "--check", "."), ("mypy",))
-CALIBRATION = ("python", "scripts/verify.py", "--short", "--coverage", "--control", "--convection", "--accuracy")
+SECTIONS = ("--coverage", "--control", "--convection", "--accuracy", "--crosscheck")
+CALIBRATION = ("python", "scripts/verify.py", "--short", *SECTIONS)
 
 
 def main(arguments: "list[str]") -> int:

@@ -163,7 +163,9 @@ class BurstsTable(Table):
 class CrosscheckTable(Table):
     """``[crosscheck]``."""
 
-    starts: int | None = Field(default=None, ge=2, description="a whole number of at least 2", examples=[8])
+    starts: int | None = Field(
+        default=None, ge=4, le=16_384, description="a whole number from 4 to 16384", examples=[64]
+    )
     duration: Positive | None = Field(default=None, description="a number above 0", examples=[10000.0])
 
 

@@ -20,12 +20,13 @@ if TYPE_CHECKING:
 
 SCHEMA = 1
 MOST_WORKERS = 1024
+LEVEL = 0.05
 ABOVE_ZERO = amount("a number above 0", "1e5")
 
 
 @click.command(short_help="Check a density file against long trajectories.")
 @click.argument("file", type=click.Path(exists=True, dir_okay=False, readable=True, path_type=Path))
-@click.option("--starts", type=click.IntRange(4, 10**6), help="Dispersed starts, each with a twin; by default 64.")
+@click.option("--starts", type=click.IntRange(4, 16_384), help="Dispersed starts, each with a twin; by default 64.")
 @click.option(
     "--duration",
     type=ABOVE_ZERO,
@@ -37,7 +38,7 @@ ABOVE_ZERO = amount("a number above 0", "1e5")
 @click.option(
     "--level",
     type=amount("a number between 0 and 1", "0.05", 1.0),
-    default="0.05",
+    default=str(LEVEL),
     show_default=True,
     metavar="NUMBER",
     help="Chance that anything is said to disagree where both sides are right.",
@@ -71,12 +72,13 @@ def crosscheck(
     with open_file(file) as opened:
         from perdure._pipeline import crosscheck as checked
 
-        given = {
+        given: dict[str, float | None] = {
             "--starts": starts,
             "--duration": duration,
             "--budget-steps": budget_steps,
             "--budget-minutes": budget_minutes,
         }
+        given |= {"--level": level} if level != LEVEL else {}
         told = [word for name, value in given.items() if value is not None for word in (name, f"{value:.15g}")]
         command = shlex.join(["perdure", "crosscheck", file.name, *told])
         with contextlib.closing(reporter_for(quiet=quiet)) as progress:

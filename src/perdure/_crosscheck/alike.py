@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import numpy as np
-
 from perdure._crosscheck.evidence import N_BATCH, Evidence, Matrix
 from perdure._crosscheck.flight import N_PART
 from perdure._crosscheck.numbers import Named
@@ -32,21 +30,13 @@ def starts_of(evidence: Evidence, chance: float, matrix: Matrix, begun: Disperse
     ratio, p_value, regime, worst = max(found, key=lambda item: item[0]) if found else (1.0, 1.0, 0, None)
     unlike = [named for _, named in evidence.named if uneven(named.found, chance)]
     visits = flight.kept_visits()
-    state, n_start = flight.state, flight.n // 2
-    width = flight.setting.axis_upper - flight.setting.axis_lower
-    gap = np.abs(state[:, :n_start] - state[:, n_start:]) / width[:, None]
-    # unrelated states: each with the next start
-    typical = np.abs(state[:, :n_start] - np.roll(state[:, :n_start], 1, axis=1)) / width[:, None]
-    alive = np.isfinite(gap).all(axis=0)
-    typical = typical[:, np.isfinite(typical).all(axis=0)].max(axis=0)
-    far = 1e-3 * float(np.median(typical)) if len(typical) else 0.0
     counts = [len(lanes) for lanes in evidence.lanes]
     return Starts(
         n_tried=begun.n_tried,
-        n_lost=begun.n_lost + int((~np.isfinite(state).all(axis=0)).sum()),
+        n_lost=begun.n_lost + evidence.n_gone,
         n_trajectory=flight.n,
-        twins_apart=float(np.mean(gap[:, alive].max(axis=0) > far)) if alive.any() else 0.0,
-        orders_differ=orders_differ(evidence.batches, len(evidence.case.events), n_start),
+        twins_apart=evidence.apart,
+        orders_differ=orders_differ(evidence.batches, len(evidence.case.events), flight.n // 2),
         equal=not unlike,
         worst="" if worst is None else label(regime, n_regime, worst),
         ratio=float(ratio),

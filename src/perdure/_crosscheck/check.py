@@ -9,6 +9,7 @@ import numpy as np
 from perdure._crosscheck.alike import FORGETS, starts_of
 from perdure._crosscheck.evidence import Evidence, Matrix, Request
 from perdure._crosscheck.flight import N_PART
+from perdure._crosscheck.marginals import FINE as MARGINAL_FINE
 from perdure._crosscheck.marginals import cell_distance, marginal_judged
 from perdure._crosscheck.starts import Dispersed
 from perdure._crosscheck.verdicts import Judged, holm, judged, uneven
@@ -54,13 +55,13 @@ def checked(
     Parameters
     ----------
     volume_p : list of float or None
-        Chances of further comparisons that belong to the same family.
+        Chances of the sums of the exponents, by regime, that belong to the same family.
 
     Returns
     -------
     Checked
     list of bool
-        Which of the further comparisons are rejected.
+        Which of the sums are rejected.
     """
     flight = evidence.flight
     marginals = evidence.marginals(rng)
@@ -73,6 +74,7 @@ def checked(
         None if differs or named.number == "return_period" else w.p_value
         for (_, named), w, differs in zip(evidence.named, evidence.weighed, is_uneven, strict=True)
     ]
+    volume_p = [None if r in unlike else p for r, p in enumerate(volume_p)]
     family = tested + [None if r in unlike else m.p_value for r, m in marginals] + volume_p
     rejected = holm(family, request.level)
     results = [
@@ -89,9 +91,16 @@ def checked(
         marginal_judged(r, m, refused, r in unlike)
         for (r, m), refused in zip(marginals, rejected[len(tested) : len(tested) + len(marginals)], strict=True)
     ]
+    whole = flight.steps * flight.setting.step
+    lengths = [c.length for c in comparisons if c.length is not None]
+    lengths += [
+        whole * max((found.own / max(found.other, MARGINAL_FINE)) ** 2, 1.0)
+        for (_, found), told in zip(marginals, judged_marginals, strict=True)
+        if told.verdict == TOO_SHORT
+    ]
     starts = starts_of(evidence, chance, matrix, begun)
     refused_volumes = rejected[len(tested) + len(marginals) :]
-    verdict, messages = overall(evidence, comparisons, judged_marginals, starts, matrix, any(refused_volumes))
+    verdict, messages = overall(evidence, comparisons, judged_marginals, starts, lengths, any(refused_volumes))
     mass = np.zeros(len(flight.setting.keys))
     visits = flight.kept_visits()
     if len(evidence.regimes) == 1:
@@ -168,39 +177,40 @@ def overall(
     comparisons: list[Comparison],
     marginals: list[MarginalComparison],
     starts: Starts,
-    matrix: Matrix,
+    lengths: list[float],
     volumes_differ: bool,
 ) -> tuple[str, tuple[str, ...]]:
-    """Verdict of all numbers together, and sentences for it."""
+    """Verdict of all numbers together, and sentences for it; `lengths` are those that would do."""
     messages = []
     verdicts = [c.verdict for c in comparisons] + [m.verdict for m in marginals]
-    kept = evidence.flight.steps * (1.0 - 1.0 / N_PART) * evidence.flight.setting.step
+    n_differ, n_short = verdicts.count(DISAGREES), verdicts.count(TOO_SHORT)
     second = "second regime" in starts.message
-    if any(len(units) < 2 for units in evidence.units):
-        messages.append("fewer than two starts ended in a regime: its numbers are not compared")
-    if starts.in_regime[-1] and len(starts.in_regime) > 2:
-        messages.append(f"{starts.in_regime[-1]} trajectories ended in no regime of the density")
-    if DISAGREES in verdicts or volumes_differ or evidence.moved.any() or second:
-        n = verdicts.count(DISAGREES)
-        if n:
-            messages.insert(0, f"{n} of {len(verdicts)} comparisons disagree: do not rely on these numbers")
-        if volumes_differ:
-            messages.append(
-                "the sum of the Lyapunov exponents disagrees with the rate of change of volumes by the density"
-            )
+    if n_differ:
+        messages.append(f"{n_differ} of {len(verdicts)} comparisons disagree: do not rely on these numbers")
+    if volumes_differ:
+        messages.append("the sum of the Lyapunov exponents disagrees with the change of volumes by the density")
+    if n_differ or volumes_differ or evidence.moved.any() or second:
         verdict = DISAGREES
-    elif TOO_SHORT in verdicts or not starts.equal or not any(v == AGREES for v in verdicts):
+    elif n_short or not starts.equal or evidence.n_gone or AGREES not in verdicts:
         verdict = TOO_SHORT
-        lengths = [c.length for c in comparisons if c.length is not None]
-        n = verdicts.count(TOO_SHORT)
         if lengths:
-            messages.insert(
-                0,
-                f"{n} of {len(verdicts)} comparisons are too short to tell: trajectories of {max(lengths):.3g} "
-                f"{evidence.case.system.time_unit} would do (these: {kept / (1.0 - 1.0 / N_PART):.3g})",
+            unit = evidence.case.system.time_unit
+            whole = evidence.flight.steps * evidence.flight.setting.step
+            messages.append(
+                f"{n_short} of {len(verdicts)} comparisons are too short to tell: trajectories of {max(lengths):.3g}"
+                f"{'' if unit == '1' else f' {unit}'} would do (these: {whole:.3g})"
             )
     else:
         verdict = AGREES
+    if evidence.n_gone:
+        messages.append(
+            f"{evidence.n_gone} of {evidence.flight.n} trajectories left all bounds in flight and are not counted: "
+            "the long run may not last"
+        )
+    if any(len(units) < 2 for units in evidence.units):
+        messages.append("fewer than two starts ended in a regime: its numbers are not compared")
+    if starts.in_regime[-1] > evidence.n_gone and len(starts.in_regime) > 2:
+        messages.append(f"{starts.in_regime[-1] - evidence.n_gone} trajectories ended in no regime of the density")
     if len(starts.in_regime) > 2 or not starts.equal:
         messages.append(starts.message)
     return verdict, tuple(messages)

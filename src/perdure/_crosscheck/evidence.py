@@ -13,7 +13,7 @@ from perdure._crosscheck.flight import N_PART, N_SLICE, Flight
 from perdure._crosscheck.marginals import FINE as MARGINAL_FINE
 from perdure._crosscheck.marginals import MarginalFound, marginal_found
 from perdure._crosscheck.numbers import Named, numbers_of, units_of
-from perdure._crosscheck.starts import ended
+from perdure._crosscheck.starts import ended, twins_apart
 from perdure._crosscheck.verdicts import uneven, weighed
 from perdure._records import CaseRecord, Floats, Quantity, Regime
 
@@ -22,6 +22,9 @@ __all__ = ["N_BATCH", "Evidence", "Matrix", "Request", "flown"]
 N_BATCH = 8
 # The flight goes on until its errors are this part of those that are sharp enough.
 SHARPER = 0.5
+
+# The first flight, as a part of the longest: each is as long as all before it together.
+FIRST = 64
 
 Progress = Callable[[int, int], None]
 
@@ -37,7 +40,7 @@ class Request:
     limit : float
         Most steps of all trajectories.
     seconds : float
-        Most time on the clock.
+        Most time on the clock for trajectories, and once more for exponents.
     level : float
         Chance of any "disagrees" where both sides are right.
     """
@@ -73,15 +76,19 @@ class Evidence:
         self.case, self.regimes, self.flight = case, regimes, flight
         self.batches = flight.kept(N_BATCH)
         alive = np.isfinite(flight.state).all(axis=0)
+        self.n_gone = int((~alive).sum())
         last, self.moved = ended(setting.grid, setting.keys, [r.cell for r in regimes], flight.stands[1:])
         self.last = np.where(alive, last, -1)
         if len(regimes) == 1:
             self.last = np.where(alive, 0, -1)
         self.lanes = tuple(np.flatnonzero(self.last == r) for r in range(len(regimes)))
         self.units = [units_of(lanes, flight.n // 2) for lanes in self.lanes]
+        self.apart = twins_apart(flight.state, setting.axis_upper - setting.axis_lower)
+        # with noise the twins of a pair have noise of their own
+        self.independent = case.system.is_noisy or self.apart > 0.5
         self.named: list[tuple[int, Named]] = []
         for r, regime in enumerate(regimes):
-            numbers = numbers_of(case, regime, self.batches, self.units[r], setting.step, centres)
+            numbers = numbers_of(case, regime, self.batches, self.units[r], setting.step, centres, self.independent)
             self.named += [(r, named) for named in numbers]
         kept = flight.steps * (1.0 - 1.0 / N_PART) * setting.step
         self.weighed = [weighed(named, self.visits(r, named, kept)) for r, named in self.named]
@@ -108,7 +115,7 @@ class Evidence:
         """Marginals of every regime that two starts or more ended in."""
         counts = self.flight.kept_counts()
         return [
-            (r, marginal_found(name, regime.marginals[name], counts[:, k], self.units[r], rng))
+            (r, marginal_found(name, regime.marginals[name], counts[:, k], self.units[r], self.independent, rng))
             for r, regime in enumerate(self.regimes)
             if len(self.units[r]) >= 2
             for k, name in enumerate(self.case.system.state)
@@ -132,15 +139,13 @@ def flown(
         length, most = steps // N_SLICE, steps
     else:
         most = max(int(request.limit / n), N_SLICE * every)
-        length = max(most // 16 // N_SLICE // every, 1) * every
+        length = max(most // FIRST // N_SLICE // every, 1) * every
     total = max(1, int(most * n / 1e6))
     while True:
-        before = flight.steps
         flight.extend(length, lambda k: progress(min(int(flight.length * k * n / 1e6), total), total))
         evidence = Evidence(case, regimes, flight, centres)
         if steps is not None or evidence.sharp or 2 * flight.steps > most:
             return evidence
-        spent = time.monotonic() - begun
         # the next flight takes as many steps as all before
-        if spent * (1.0 + flight.steps / max(flight.steps - before / 2, 1)) > request.seconds:
+        if 2.0 * (time.monotonic() - begun) > request.seconds:
             return evidence

@@ -30,10 +30,19 @@ MOST_PER_CALL = min(65536, MOST_STEPS)
 
 @dataclass(frozen=True)
 class Stir:
-    """Low bits of the states of a map that are drawn anew every so many steps; 0 bits: never."""
+    """What is done against rounding, for maps.
+
+    Attributes
+    ----------
+    every, bits : int
+        Low bits of the states that are drawn anew every so many steps; 0 bits: never.
+    moved : float
+        Largest part of the way to the middle that a step begins nearer.
+    """
 
     every: int
     bits: int
+    moved: float
 
 
 @dataclass(frozen=True)
@@ -51,7 +60,7 @@ class Setting:
         Unit: time.
     stride, every : int
         Steps between points of the histograms, and between points of the cells. Multiples of what the kernel tests
-        together; `every` of `stride`.
+        together.
     axis_lower, axis_upper : ndarray, shape (n_dim,)
         Range of the histograms. Units of the state.
     n_interval : int
@@ -84,7 +93,7 @@ class Setting:
         scale = self.n_interval / (self.axis_upper - self.axis_lower)
         self.follow(
             state, sums, counts, samples, words, self.parameters, self.step, n_step, self.stride, self.every,
-            self.axis_lower, scale, self.stir.every, np.uint64(2**self.stir.bits - 1),
+            self.axis_lower, scale, self.stir.every, np.uint64(2**self.stir.bits - 1), self.stir.moved,
         )  # fmt: skip
         return sums, samples
 

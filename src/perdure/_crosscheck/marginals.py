@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -16,6 +17,12 @@ __all__ = ["FINE", "MarginalFound", "cell_distance", "marginal_found", "marginal
 N_DRAW = 400
 # Total variation below which nobody asks for more.
 FINE = 2e-3
+# Total variation, and mass, below which there is no difference.
+SMALL = 1e-3
+# Total variation over that from sampling, from which a marginal does not agree.
+FAR = 5.0
+# Points in a slot per start, or starts that met it, below which the normal law does not hold.
+FEWEST_COUNTS = 25
 
 
 @dataclass(frozen=True)
@@ -38,7 +45,12 @@ class MarginalFound:
 
 
 def marginal_found(
-    name: str, marginal: Marginal, counts: Integers, units: list[NDArray[np.int64]], rng: np.random.Generator
+    name: str,
+    marginal: Marginal,
+    counts: Integers,
+    units: list[NDArray[np.int64]],
+    independent: bool,
+    rng: np.random.Generator,
 ) -> MarginalFound:
     """Compare one marginal.
 
@@ -48,34 +60,31 @@ def marginal_found(
         Histogram of each trajectory; the first and the last slot lie beyond the ends.
     units : list of arrays
         Trajectories that count as one.
+    independent : bool
+        Starts are forgotten; see `numbers_of`.
     rng : numpy.random.Generator
         For the draws behind the expected distances.
     """
-    from scipy.special import stdtr
-
     n_unit = len(units)
     part = np.array([counts[unit].sum(axis=0) for unit in units], dtype=float)
     part /= np.maximum(part.sum(axis=1, keepdims=True), 1.0)
     mean = part.mean(axis=0)
     theirs = np.concatenate([[marginal.below], marginal.mass, [marginal.above]])
-    own = part.std(axis=0, ddof=1) / np.sqrt(n_unit)
+    less = np.sqrt(n_unit) if independent else 1.0
+    own = part.std(axis=0, ddof=1) / less
     other = np.concatenate([[0.0], density_errors(marginal, mean[1:-1]), [0.0]])
-    # counts of the few that come to a rare interval: their spread says little
-    n_hit = (part > 0.0).sum(axis=0)
-    own = np.where(n_hit < 25, np.maximum(own, np.maximum(mean, theirs) / np.sqrt(np.maximum(n_hit, 1))), own)
-    error = np.hypot(own, other)
+    # few of few visits: their spread says little
+    count = counts[np.concatenate(units)].sum(axis=0)
+    seldom = (count < FEWEST_COUNTS * n_unit) & ((part > 0.0).sum(axis=0) < FEWEST_COUNTS)
+    own = np.where(seldom, np.maximum(own, np.maximum(mean, theirs) / np.sqrt(np.maximum(count, 1))), own)
+    p_value = furthest(mean - theirs, own, other, min(n_unit - 1.0, DENSITY_FREEDOM))
     inner = slice(1, -1)
-    seen = np.flatnonzero((error > 0.0)[inner]) + 1
-    distance = np.abs(mean - theirs)[seen] / error[seen]
-    # degrees of freedom as for numbers
-    chance = 2.0 * stdtr(min(n_unit - 1.0, DENSITY_FREEDOM), -distance)
-    p_value = float(min(1.0, len(seen) * chance.min())) if len(seen) else 1.0
     # draws of both errors: signs on the trajectories keep what neighbours have in common
     sign = rng.choice([-1.0, 1.0], (N_DRAW, n_unit))
-    ours = sign @ (part - mean) / n_unit
+    ours = sign @ (part - mean) / (np.sqrt(n_unit) * less)
     # what neighbours have in common in the density is not known: taken to be the same
     shape = np.where(own > 0.0, other / np.where(own > 0.0, own, 1.0), 0.0)
-    noise = rng.choice([-1.0, 1.0], (N_DRAW, n_unit)) @ (part - mean) / n_unit * shape
+    noise = rng.choice([-1.0, 1.0], (N_DRAW, n_unit)) @ (part - mean) / (np.sqrt(n_unit) * less) * shape
     noise -= noise.sum(axis=1, keepdims=True) * mean
     width = np.diff(marginal.edges)
     pairs = zip(distances((mean - theirs)[None], width), distances(ours - noise, width), strict=True)
@@ -92,6 +101,28 @@ def marginal_found(
         float(distances(ours, width)[0].mean()),
         float(distances(noise, width)[0].mean()),
     )
+
+
+def furthest(gap: Floats, own: Floats, other: Floats, freedom: float) -> float:
+    """Chance of the slot that is furthest off, allowing for their number; gap and errors (n_slot,).
+
+    Slots are taken in pairs, once from the first and once from the second on, and the larger chance counts: a point
+    that holds mass and lies at the edge of two slots is in one or the other by rounding. Below `SMALL` nothing differs.
+    """
+    from scipy.special import stdtr
+
+    if 0.5 * np.abs(gap).sum() < SMALL:
+        return 1.0
+    chances = []
+    for cuts in (np.arange(0, len(gap), 2), np.append(0, np.arange(1, len(gap), 2))):
+        apart = np.abs(np.add.reduceat(gap, cuts))
+        # neighbours may err together
+        error = np.hypot(np.add.reduceat(own, cuts), np.add.reduceat(other, cuts))
+        seen = (error > 0.0) | (apart > SMALL)
+        with np.errstate(divide="ignore"):
+            distance = apart[seen] / error[seen]
+        chances.append(min(1.0, seen.sum() * 2.0 * float(stdtr(freedom, -distance).min())) if seen.any() else 1.0)
+    return max(chances)
 
 
 def density_errors(marginal: Marginal, mass: Floats) -> Floats:
@@ -121,6 +152,8 @@ def marginal_judged(regime: int, found: MarginalFound, rejected: bool, is_uneven
         verdict, reason = DISAGREES, "an interval is further off than chance allows"
     elif found.own > max(found.other, FINE):
         verdict, reason = TOO_SHORT, "sampling of the trajectories alone gives more than that of the density"
+    elif found.total_variation.value > max(FAR * found.total_variation.expected, FINE):
+        verdict, reason = TOO_SHORT, "far apart, but too few starts to tell"
     return MarginalComparison(
         regime=regime,
         component=found.component,
@@ -143,7 +176,10 @@ def cell_distance(visits: Integers, mass: Floats) -> Distance:
     What sampling of the trajectories alone would give is reckoned from the spread between the groups, for normal
     errors: E|x| = sqrt(2 / pi) times the standard error.
     """
-    part = visits / np.maximum(visits.sum(axis=1, keepdims=True), 1)
+    visits = visits[visits.sum(axis=1) > 0]
+    if len(visits) < 2:
+        return Distance(math.nan, math.nan)
+    part = visits / visits.sum(axis=1, keepdims=True)
     mean = part.mean(axis=0)
     error = part.std(axis=0, ddof=1) / np.sqrt(len(part))
     gap = mean - np.append(mass, max(1.0 - mass.sum(), 0.0))

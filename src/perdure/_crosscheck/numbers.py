@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -38,6 +39,8 @@ class Found:
         Batches with any time inside; for observables all of them.
     spread : float or None
         Standard deviation over the long run of what is averaged; None for ratios.
+    size : float
+        Magnitude that rounding, and what is left of a start, are relative to.
     """
 
     quantity: Quantity
@@ -48,6 +51,7 @@ class Found:
     trend_p: float
     hits: int
     spread: float | None
+    size: float
 
 
 @dataclass(frozen=True)
@@ -68,7 +72,13 @@ def units_of(lanes: NDArray[np.int64], n_start: int) -> list[NDArray[np.int64]]:
 
 
 def numbers_of(
-    case: CaseRecord, regime: Regime, batches: Floats, units: list[NDArray[np.int64]], step: float, centres: Floats
+    case: CaseRecord,
+    regime: Regime,
+    batches: Floats,
+    units: list[NDArray[np.int64]],
+    step: float,
+    centres: Floats,
+    independent: bool,
 ) -> Iterator[Named]:
     """Every number of a regime that its density gives.
 
@@ -82,9 +92,13 @@ def numbers_of(
         Unit: time.
     centres : ndarray, shape (n_observable,)
         What observables are summed about.
+    independent : bool
+        Starts are forgotten. Where not, as on a cycle, their phases are no random sample of the long run, and the error
+        is the spread between starts itself, not that of their mean.
     """
     if len(units) < 2:
         return
+    found = partial(number_found, independent=independent)
     x = np.stack([batches[:, :, unit].mean(axis=2) for unit in units], axis=2)
     mean = x.mean(axis=(0, 2))
     time_unit = case.system.time_unit
@@ -136,7 +150,7 @@ def numbers_of(
         size = float(mean[second]) + float(centres[k]) ** 2
         if seen.mean.value is not None:
             value, deviation = float(mean[first] + centres[k]), math.sqrt(variance)
-            told = found(x, mean, value, {first: 1.0}, "real", seen.mean.unit, x[:, 0].size, deviation)
+            told = found(x, mean, value, {first: 1.0}, "real", seen.mean.unit, x[:, 0].size, deviation, math.sqrt(size))
             yield Named("observable", observable.name, "mean", seen.mean, told)
         if seen.variance.value is not None:
             by = {second: 1.0, first: -2.0 * float(mean[first])}
@@ -144,7 +158,7 @@ def numbers_of(
             yield Named("observable", observable.name, "variance", seen.variance, told)
 
 
-def found(
+def number_found(
     x: Floats,
     mean: Floats,
     value: float,
@@ -154,6 +168,8 @@ def found(
     hits: int,
     spread: float | None,
     size: float = 0.0,
+    *,
+    independent: bool,
 ) -> Found:
     """A number with the slopes of it in the averages; x (n_batch, n_sum, n_unit), mean (n_sum,). First order.
 
@@ -168,12 +184,15 @@ def found(
     along = float(each.var(axis=0, ddof=1).mean()) / (n_batch * n_unit)
     freedom = n_unit - 1
     # trajectories at rest differ by rounding alone
-    rounding = (ROUNDING * (abs(value) + (spread or 0.0) + size)) ** 2
+    size = max(size, abs(value), spread or 0.0)
+    rounding = (ROUNDING * size) ** 2
     if between * n_unit <= rounding:
         between, along = 0.0, 0.0
     ratio = between / along if along > 0.0 else (1.0 if between == 0.0 else math.inf)
+    less = math.sqrt(n_unit) if independent else 1.0
+    between *= n_unit / less**2
     half = each[: n_batch // 2].mean(axis=0) - each[n_batch // 2 :].mean(axis=0)
-    moved = float(half.std(ddof=1)) / math.sqrt(n_unit)
+    moved = float(half.std(ddof=1)) / less
     trend = abs(float(half.mean())) / moved if moved > 0.0 and between > 0.0 else 0.0
     return Found(
         quantity=interval(value, math.sqrt(between), freedom, unit, kind),
@@ -184,4 +203,5 @@ def found(
         trend_p=2.0 * float(stdtr(freedom, -trend)),
         hits=hits,
         spread=spread,
+        size=size,
     )

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -12,7 +12,7 @@ from perdure._crosscheck.tangents import BEGIN, END, Parting
 from perdure._records import Floats, Growth, Quantity
 from perdure._statistics import interval
 
-__all__ = ["SURE", "Spectrum", "dimension_of", "entropy_of", "growth_of", "hypotheses", "spectrum_of"]
+__all__ = ["SURE", "Spectrum", "dimension_of", "entropy_of", "growth_of", "hypotheses", "spectrum_of", "withdrawn"]
 
 # Standard errors beyond which an exponent, or a sum of them, counts as different from zero.
 SURE = 3.0
@@ -30,36 +30,50 @@ class Spectrum:
         Largest first; 1 / time. The last ones may have no value.
     total : Quantity
     each : ndarray, shape (k, n)
-        Rates along each trajectory, in the order of `exponents`.
+        Rates of each start, in the order of `exponents`.
+    floor : float
+        What differences of states leave open in any exponent; 1 / time.
+    independent : bool
+        Starts are forgotten; where not, the spread between them is the error.
     """
 
     exponents: tuple[Quantity, ...]
     total: Quantity
     each: Floats
+    floor: float
+    independent: bool
+
+    def error(self, values: Floats, count: int = 1) -> float:
+        """Standard error of the mean of values, one per start, that are made of so many exponents."""
+        return math.hypot(spread_error(values, self.independent), count * self.floor)
+
+    def mean(self, values: Floats, count: int, unit: str) -> Quantity:
+        """The mean with its interval."""
+        sampling, others = spread_error(values, self.independent), {"differences": count * self.floor}
+        return interval(float(values.mean()), sampling, len(values) - 1, unit, "real", others)
 
 
-def spectrum_of(rate: Floats, lost: Floats, unit: str) -> Spectrum:
-    """Exponents with errors from the spread between trajectories, rate (k, n)."""
-    rate = rate[:, np.isfinite(rate).all(axis=0)]
+def spectrum_of(rate: Floats, lost: Floats, unit: str, floor: float, independent: bool = True) -> Spectrum:
+    """Exponents with errors from the spread between starts, rate (k, n), and from the differences."""
     order = np.argsort(-rate.mean(axis=1), kind="stable")
     rate, bad = rate[order], lost[order] > MOST_LOST
     reason = "contracts by more than a factor of 10^8 between two steps: lost in rounding"
-    exponents = tuple(
-        Quantity(None, None, None, {}, unit, reason) if gone else mean_quantity(row, unit)
-        for row, gone in zip(rate, bad, strict=True)
-    )
-    total = Quantity(None, None, None, {}, unit, reason) if bad.any() else mean_quantity(rate.sum(axis=0), unit)
-    return Spectrum(exponents, total, rate)
+    none = Quantity(None, None, None, {}, unit, reason)
+    made = Spectrum((), none, rate, floor, independent)
+    exponents = tuple(none if gone else made.mean(row, 1, unit) for row, gone in zip(rate, bad, strict=True))
+    total = none if bad.any() else made.mean(rate.sum(axis=0), len(rate), unit)
+    return replace(made, exponents=exponents, total=total)
 
 
-def mean_quantity(values: Floats, unit: str) -> Quantity:
-    """Mean of independent values with its interval."""
-    error = float(values.std(ddof=1)) / math.sqrt(len(values))
-    return interval(float(values.mean()), error, len(values) - 1, unit, "real")
+def spread_error(values: Floats, independent: bool) -> float:
+    """Standard error of the mean of values, one per start."""
+    return float(values.std(ddof=1)) / (math.sqrt(len(values)) if independent else 1.0)
 
 
-def error_of(values: Floats) -> float:
-    return float(values.std(ddof=1)) / math.sqrt(len(values))
+def withdrawn(spectrum: Spectrum, reason: str) -> Spectrum:
+    """The same without its numbers, for this reason."""
+    exponents = tuple(replace(e, value=None, low=None, high=None, parts={}, reason=reason) for e in spectrum.exponents)
+    return replace(spectrum, exponents=exponents, total=replace(exponents[0]))
 
 
 def entropy_of(spectrum: Spectrum, unit: str) -> Quantity:
@@ -67,10 +81,12 @@ def entropy_of(spectrum: Spectrum, unit: str) -> Quantity:
 
     Ya. B. Pesin, Russ. Math. Surveys 32 (1977) 55-114.
     """
-    positive = [row for row in spectrum.each if row.mean() > SURE * error_of(row)]
+    if spectrum.total.value is None:
+        return Quantity(None, None, None, {}, unit, spectrum.total.reason)
+    positive = [row for row in spectrum.each if row.mean() > SURE * spectrum.error(row)]
     if not positive:
         return Quantity(0.0, 0.0, 0.0, {"sampling": 0.0}, unit, "no exponent is positive")
-    return mean_quantity(np.sum(positive, axis=0), unit)
+    return spectrum.mean(np.sum(positive, axis=0), len(positive), unit)
 
 
 def dimension_of(spectrum: Spectrum, noisy: bool) -> Quantity:
@@ -91,7 +107,7 @@ def dimension_of(spectrum: Spectrum, noisy: bool) -> Quantity:
         return Quantity(None, None, None, {}, "1", spectrum.total.reason)
     each = spectrum.each
     partial = np.cumsum(each, axis=0)
-    held = [j for j, row in enumerate(partial) if row.mean() >= -SURE * error_of(row)]
+    held = [j for j, row in enumerate(partial) if row.mean() >= -SURE * spectrum.error(row, j + 1)]
     n_dim = len(each)
     if not held:
         return Quantity(
@@ -103,8 +119,10 @@ def dimension_of(spectrum: Spectrum, noisy: bool) -> Quantity:
     ahead, behind = max(float(partial[j - 1].mean()), 0.0), float(each[j].mean())
     by_sum = (partial[j - 1] - partial[j - 1].mean()) / -behind
     linear = by_sum + ahead * (each[j] - behind) / behind**2
-    error = float(linear.std(ddof=1)) / math.sqrt(each.shape[1])
-    return interval(j + ahead / -behind, error, each.shape[1] - 1, "1", "real")
+    error = spread_error(linear, spectrum.independent)
+    return interval(
+        j + ahead / -behind, error, each.shape[1] - 1, "1", "real", {"differences": (j + 1) * spectrum.floor / -behind}
+    )
 
 
 def hypotheses(noisy: bool, is_flow: bool) -> tuple[str, ...]:

@@ -13,10 +13,12 @@ from perdure._crosscheck.flight import cell_of
 from perdure._records import BoxGrid, Floats, Integers
 from perdure.errors import NoAttractorError
 
-__all__ = ["TWIN", "Dispersed", "dispersed", "ended", "orders_differ", "twins"]
+__all__ = ["TWIN", "Dispersed", "dispersed", "ended", "orders_differ", "twins", "twins_apart"]
 
 # Starts tried for each that is kept, and their distance from their twins, in widths of the domain.
 TRIED, TWIN = 4, 1e-9
+# Distance of twins, over that of unrelated states, from which they have parted.
+APART = 1e-3
 
 
 @dataclass(frozen=True)
@@ -92,6 +94,17 @@ def ended(
         moved |= (row >= 0) & (last >= 0) & (row != last)
         last = np.where(row >= 0, row, last)
     return last, moved
+
+
+def twins_apart(state: Floats, width: Floats) -> float:
+    """Part of the twins, the halves of state (n_dim, n), that are a thousandth as far apart as unrelated states."""
+    n_start = state.shape[1] // 2
+    first = state[:, :n_start]
+    gap = np.abs(first - state[:, n_start:]) / width[:, None]
+    # unrelated states: each with the next start
+    typical = np.abs(first - np.roll(first, 1, axis=1)) / width[:, None]
+    gap, typical = (rows[:, np.isfinite(rows).all(axis=0)].max(axis=0) for rows in (gap, typical))
+    return float(np.mean(gap > APART * np.median(typical))) if len(gap) and len(typical) else 0.0
 
 
 def orders_differ(batches: Floats, n_event: int, n_start: int) -> float:

@@ -54,6 +54,8 @@ class Bare:
         Largest magnitude over spread of a component: differences lose so much to rounding.
     stirred : bool
         A map that loses bits: low ones are drawn anew between steps.
+    moved : float
+        Part of the way to the middle that a step of a map begins nearer.
     """
 
     follow: Callable[..., int]
@@ -65,10 +67,15 @@ class Bare:
     period: Floats
     magnitude: float
     stirred: bool
+    moved: float
 
     @property
     def low(self) -> float:
         return LOST * max(self.magnitude, 1.0)
+
+    def floor(self, n_step: int) -> float:
+        """What differences leave open in a rate over so many steps: their size, and their rounding; 1 / time."""
+        return max(APART, self.low) / (n_step * self.step)
 
     def joint(self, state: Floats, k: int, apart: float) -> Floats:
         """Trajectories (n_dim, n) and k copies of each, along the axes in turn; shape (n_dim, 1 + k, n)."""
@@ -109,7 +116,7 @@ class Bare:
         never = n_step + 1
         self.follow(
             flat, np.zeros((0, copies * n)), counts, np.empty((0, n_dim, copies * n)), words, self.parameters,
-            self.step, n_step, never, never, self.middle - 0.5, np.ones(n_dim), never, np.uint64(0),
+            self.step, n_step, never, never, self.middle - 0.5, np.ones(n_dim), never, np.uint64(0), self.moved,
         )  # fmt: skip
 
     def no_counts(self, n: int) -> Integers:
@@ -208,22 +215,22 @@ def stir(joint: Floats, rng: np.random.Generator) -> None:
     joint -= joint[:, :1] * (STIR * rng.random(joint.shape[2]))
 
 
-def volume_rates(bare: Bare, state: Floats, rng: np.random.Generator) -> Floats:
-    """Rate at which volumes change at each of the states (n_dim, n): ln |det| of a step over its length, 1 / time.
+def volume_rates(bare: Bare, state: Floats, n_step: int, rng: np.random.Generator) -> Floats:
+    """Rate at which volumes change from each of the states (n_dim, n): ln |det| of a few steps over their length.
 
-    nan where the step leaves all bounds.
+    Unit: 1 / time. nan where the steps leave all bounds.
     """
     n_dim, n = state.shape
     out = np.empty(n)
     for at in range(0, n, 4096):
         part = np.ascontiguousarray(state[:, at : at + 4096])
         joint = bare.joint(part, n_dim, APART)
-        bare.fly_tangents(joint, bare.together, rng, bare.no_counts(joint.shape[1] * joint.shape[2]))
+        bare.fly_tangents(joint, n_step, rng, bare.no_counts(joint.shape[1] * joint.shape[2]))
         growth, gone = np.zeros((n_dim, part.shape[1])), np.zeros(n_dim, dtype=np.int64)
         finite = np.isfinite(joint).all(axis=(0, 1))
         orthonormalise(joint, bare.scale, bare.period, APART, bare.low, growth, gone)
         out[at : at + 4096] = np.where(finite, growth.sum(axis=0), np.nan)
-    return out / (bare.together * bare.step)
+    return out / (n_step * bare.step)
 
 
 @dataclass(frozen=True)

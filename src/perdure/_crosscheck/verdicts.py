@@ -24,6 +24,8 @@ __all__ = ["FINE", "Judged", "Weighed", "holm", "judged", "two_sided", "uneven",
 DENSITY_FREEDOM = 7.0
 # Half-width over value below which nobody asks for more, and the standard error that goes with it.
 FINE = 1e-3
+# Part of a number that is no difference.
+SMALL = 1e-6
 # Batches with any time inside, below which the normal law does not hold for the trajectories.
 FEWEST_HITS = 25
 # Starts differ if the variance between them is so many times that along them, and beyond chance.
@@ -101,10 +103,10 @@ def weighed(named: Named, expected_hits: float) -> Weighed:
         own = max(own, max(value, centre) / math.sqrt(count))
     scale = abs(centre) if found.spread is None or named.subject == "event" else max(abs(centre), found.spread)
     wanted = max(other, FINE * scale / quantile(1e9))
-    error = math.hypot(own, other)
+    # what is left of the way in, and rounding, keep two right numbers apart that have no error at all
+    error = math.hypot(own, other, SMALL * found.size)
     if error == 0.0:
-        same = math.isclose(value, centre, rel_tol=1e-9, abs_tol=1e-300)
-        return Weighed(0.0 if same else math.inf, 1.0 if same else 0.0, own, other, wanted)
+        return Weighed(0.0, 1.0, own, other, wanted)
     # The smaller of the two degrees of freedom never finds too much (M. R. Mickey and M. B. Brown, Ann. Math. Statist.
     # 37 (1966) 639-642). Welch's would: of many numbers some have a small error from their few replicates by chance.
     freedom = min(found.freedom, DENSITY_FREEDOM)

@@ -24,6 +24,7 @@ def volume_rate(
     mass: Floats,
     unit: str,
     sampling: Callable[[Floats], float],
+    n_step: int,
     rng: np.random.Generator,
 ) -> Quantity:
     """Mean of div f (flows) or ln |det Df| (maps) over a density that is even within each cell.
@@ -35,12 +36,16 @@ def volume_rate(
     sampling : callable
         Standard error of the mean of a function that has these values (n,) on the cells, from the bursts.
 
+    n_step : int
+        Steps over which the rate is taken.
+
     Returns
     -------
     Quantity
         Parts of its error: "sampling" of the bursts and of the points in the cells, and "cells", the change when
         cells of twice the width are taken; where
-        a cell has no neighbours, the spread within it.
+        a cell has no neighbours, the spread within it; "differences", what
+        copies that are a little apart leave open.
     """
     from scipy.stats import qmc
 
@@ -55,7 +60,9 @@ def volume_rate(
         # the same points in all cells, shifted by an offset of each cell's own
         place = (base[:, None, :] + rng.random((grid.n_dim, len(corners), 1))) % 1.0
         point = corners.T[:, :, None] + place * grid.width[:, None, None]
-        rate = volume_rates(bare, np.ascontiguousarray(point.reshape(grid.n_dim, -1)), rng).reshape(len(corners), -1)
+        rate = volume_rates(bare, np.ascontiguousarray(point.reshape(grid.n_dim, -1)), n_step, rng).reshape(
+            len(corners), -1
+        )
         fine = np.isfinite(rate)
         count = np.maximum(fine.sum(axis=1), 1)
         mean[at : at + some] = np.where(fine, rate, 0.0).sum(axis=1) / count
@@ -71,5 +78,5 @@ def volume_rate(
     # a cell without neighbours has nothing to compare with but itself, and the law in it may be a point
     inside = float(part[alone] @ np.sqrt(scatter * n_point)[alone])
     points = math.sqrt(float(part**2 @ scatter))
-    others = {"cells": abs(float(part @ coarse) - value) + inside}
+    others = {"cells": abs(float(part @ coarse) - value) + inside, "differences": grid.n_dim * bare.floor(n_step)}
     return interval(value, math.hypot(sampling(mean), points), 7, unit, "real", others)

@@ -192,6 +192,7 @@ def warm_trajectory(follow: Kernel, spec: KernelSpec) -> None:
         np.ones(d),
         TOGETHER,
         np.uint64(0),
+        0.0,
     )
 
 

@@ -9,9 +9,10 @@ adds to the sums, which stay in registers meanwhile. The counters of a few event
 of which a core makes fewest.
 
 Binary arithmetic does what a map without noise does not: a rounded state hits an unstable point and stays there (the
-logistic map goes 0.5, 1, 0), long orbits close into cycles, a map that doubles ends at 0. So at every step a state
-moves by a random part, at most 2^-49, of its way to the middle of the histograms, inwards at either end of the long
-run; and the low bits of maps that lose bits can be drawn anew.
+logistic map goes 0.5, 1, 0), long orbits close into cycles, a map that doubles ends at 0. So a step of a map can begin
+a tiny random part of the way and of the state nearer the middle of the histograms: inwards at either end of the long
+run. Where the step ends is not touched, since a state may rest on an edge that an event asks for. And the low bits of
+maps that lose bits can be drawn anew.
 """
 
 from __future__ import annotations
@@ -36,7 +37,6 @@ TRAJECTORY_VERSION = 1
 OWN_SCHEMES = {"rk4": "three-eighths"}
 # Steps whose states are tested in one go. Even, since normal draws come in pairs.
 TOGETHER = 8
-STIR = 2.0**-49
 # Events that share a word, and the bits of the counter of each: they bound the steps of a call.
 PACKED, FIELD = 3, 21
 MOST_STEPS = 2**FIELD - TOGETHER
@@ -73,13 +73,15 @@ def step_body(spec: KernelSpec, old: list[str], new: list[str], draws: Draws) ->
     normal, sign, uniform = draws
     n_wiener = SCHEMES[spec.scheme].random_needs(spec)[0]
     lines = [f"x_{s} = {row}" for s, row in zip(spec.state, old, strict=True)]
+    if is_stirred(spec):
+        word = ", ".join(f"{k * spec.lanes} + lane" for k in range(4))
+        lines.append(f"stir = moved * unit_open(next_bits(words, {word}))")
+        for s in spec.state:
+            away = f"abs(x_{s}) if x_{s} < middle_{s} else -abs(x_{s})"
+            lines.append(f"x_{s} = x_{s} + stir * (middle_{s} - x_{s} + ({away}))")
     spare, loose = iter(normal[n_wiener:]), iter(uniform)
     lines += [f"v_{name} = {next(spare) if law == 'normal' else next(loose)}" for name, law in spec.draws]
     lines += step_lines(spec, normal[:n_wiener], sign)
-    if is_stirred(spec):
-        word = ", ".join(f"{k * spec.lanes} + lane" for k in range(4))
-        lines.append(f"stir = {STIR!r} * unit_open(next_bits(words, {word}))")
-        lines += [f"y_{s} = y_{s} + stir * (middle_{s} - y_{s})" for s in spec.state]
     for s, low, period in spec.periodic:
         lines.append(f"y_{s} = y_{s} - {period!r} * np.floor((y_{s} - {low!r}) / {period!r})")
     return lines + [f"{row} = y_{s}" for s, row in zip(spec.state, new, strict=True)]
@@ -115,11 +117,13 @@ def trajectory_source(spec: KernelSpec) -> str:
     - state (n_dim, n): where the trajectories stand; replaced by where they end, nan once they left all bounds;
     - sums (n_sum, n): time steps inside and entries of each event, then sum and sum of squares of each observable about
       its centre; added to. Entries are those between two steps, from the given state on;
-    - counts (n, n_dim, n_slot) of int64: histograms, slot 0 below and the last above; one more every `stride` steps;
-    - samples (n_sample, n_dim, n): filled with the states after every `every` steps, as far as it goes;
+    - counts (n, n_dim, n_slot) of int64: histograms, slot 0 below and the last above; one more every `stride` steps, of
+      one of the states of the go that ends there, in turn;
+    - samples (n_sample, n_dim, n): filled every `every` steps in the same way, as far as it goes;
     - stream (n,) of uint64, parameters (with the centres after them), step, n_step (at most `MOST_STEPS`), stride,
       every, lower (n_dim,) and scale (n_dim,), intervals of the histogram per unit of the state;
-    - stir_every and stirred: the bits of the mask `stirred` (uint64) are drawn anew every `stir_every` steps;
+    - stir_every, stirred, moved: the bits of the mask `stirred` (uint64) are drawn anew every `stir_every` steps, and a
+      step of a map begins a random part, at most `moved`, nearer the middle of the histograms;
 
     and returns the number of trajectories that left all bounds. n_step, stride, every and stir_every are multiples of
     `steps_together`.
@@ -163,8 +167,9 @@ def trajectory_source(spec: KernelSpec) -> str:
         go.append(f"for lane in range({lanes}):")
         for state in states:
             go += indented(test_body(spec, state, words, sums), 1)
-    histogram = []
-    for k, row in enumerate(last):
+    turned = [f"buf[(member * {len(spec.state)} + {k}) * {lanes} + lane]" for k in range(len(spec.state))]
+    histogram = ["# in turn, since cycles would be met in one phase otherwise", f"member = (at // stride) % {together}"]
+    for k, row in enumerate(turned):
         histogram += [
             f"place = ({row} - lower[{k}]) * scale[{k}] + 1.0",
             # nan goes to the first
@@ -186,7 +191,7 @@ def trajectory_source(spec: KernelSpec) -> str:
         "",
         "@njit(cache=CACHED, **LANE_OPTIONS)",
         "def follow(state, sums, counts, samples, stream, parameters, step, n_step, stride, every, lower, scale,"
-        " stir_every, stirred):",
+        " stir_every, stirred, moved):",
         "    lost = 0",
         "    n_lane, n_slot = state.shape[1], counts.shape[2]",
         *indented(constants, 1),
@@ -198,6 +203,14 @@ def trajectory_source(spec: KernelSpec) -> str:
         "        taken = 0",
         f"        for at in range({together}, n_step + 1, {together}):",
         *indented(go, 3),
+        "            if at % stride == 0:",
+        "                for lane in range(used):",
+        *indented(histogram, 5),
+        "            if at % every == 0 and taken < samples.shape[0]:",
+        f"                member = taken % {together}",
+        "                for lane in range(used):",
+        *(f"                    samples[taken, {k}, first + lane] = {row}" for k, row in enumerate(turned)),
+        "                taken += 1",
         *(
             [
                 "            if at % stir_every == 0:",
@@ -207,13 +220,6 @@ def trajectory_source(spec: KernelSpec) -> str:
             if stirs
             else []
         ),
-        "            if at % stride == 0:",
-        "                for lane in range(used):",
-        *indented(histogram, 5),
-        "            if at % every == 0 and taken < samples.shape[0]:",
-        "                for lane in range(used):",
-        *(f"                    samples[taken, {k}, first + lane] = {row}" for k, row in enumerate(last)),
-        "                taken += 1",
         "        for lane in range(used):",
         *indented(store, 3),
         "    return lost",

@@ -13,10 +13,11 @@ from perdure._pipeline.craft import Craft
 from perdure._records import Floats, Quantity
 from perdure._sampling import Flight
 from perdure._spectrum import ClassSolver, slowest
-from perdure._transitions import TransitionMatrix
 
-__all__ = ["matrix_view", "solver_of"]
+__all__ = ["matrix_view"]
 
+# Share of time outside the domain from which the cells do not tell how averages vary.
+OUTSIDE = 1e-3
 # Steps of a burst up to which each is summed by itself.
 FEW_STEPS = 32
 # Bursts from all cells of a regime for the variance of averages, and the fewest from each.
@@ -30,16 +31,19 @@ def matrix_view(craft: Craft) -> Matrix:
     if held.tally is None:
         return Matrix(nothing)
     craft.report("matrix", 0, 1)
-    transition, tau = TransitionMatrix(held.tally), held.plan.duration
+    tau = held.plan.duration
     variance: dict[tuple[int, str, str], float] = {}
     times = []
     for r in range(len(held.regimes)):
-        solver = solver_of(craft, transition, r)
+        solver = craft.solver(r)
         slow = slowest(solver)
         if slow is not None:
             times.append(-tau / math.log(abs(slow)) if abs(slow) > 0.0 else 0.0)
         names = [("event", e.name) for e in craft.case.events]
         names += [("observable", o.name) for o in craft.case.observables]
+        if held.regimes[r].mass.sum() < 1.0 - OUTSIDE:
+            # bursts that end outside have no cell to go on from
+            continue
         found = burst_variance(craft, solver, r) * tau
         variance |= {(r, *name): float(v) for name, v in zip(names, found, strict=True)}
     if not times:
@@ -82,12 +86,3 @@ def burst_variance(craft: Craft, solver: ClassSolver, regime: int) -> Floats:
     h_end = h[np.where(at < len(held.keys), at, -1)].T.reshape(mean.shape)
     step = np.where(fine, mean - (mass @ values[cell])[:, None, None] + h_end - h[cell].T[:, :, None], 0.0)
     return np.asarray(((step**2).sum(axis=2) / count) @ (mass / mass.sum()))
-
-
-def solver_of(craft: Craft, transition: TransitionMatrix, regime: int) -> ClassSolver:
-    held = craft.held
-    members = held.regimes[regime].cell
-    if transition.n_cell > len(held.keys) and held.regimes[regime].mass.sum() < 1.0 - 1e-12:
-        # the outside state belongs to the class
-        members = np.append(members, len(held.keys))
-    return ClassSolver(transition, members)

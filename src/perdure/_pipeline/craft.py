@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import replace
+from functools import cached_property
 
 import numpy as np
 
@@ -18,14 +19,18 @@ from perdure._pipeline.watch import Progress
 from perdure._records import Arbiter, Estimate, Floats
 from perdure._sampling import Flight as BurstFlight
 from perdure._sampling import kernel_for, parameter_values, trajectories_for
+from perdure._spectrum import ClassSolver
 from perdure._streams import generator
+from perdure._transitions import TransitionMatrix
 
 __all__ = ["Craft", "spread_of"]
 
 # Steps between points of histograms, and the fewest between points of cells.
 STRIDE, EVERY = 32, 256
 # Low bits drawn anew of a map that loses them: 8 in as many steps, and as many more as a state near 0 has zeros ahead.
-LOSING = Stir(8, 24)
+# Every step of a map begins a random part of at most `MOVED` nearer the middle, unless states are attracted.
+MOVED = 2.0**-49
+LOSING, STILL = Stir(8, 24, MOVED), Stir(8, 0, 0.0)
 # States, and steps in which a map that loses bits brings them together.
 N_TRIED, FORGETS_IN = 256, 512
 # Steps of a call of the kernel.
@@ -68,8 +73,25 @@ class Craft:
         self.stride = max(STRIDE if system.is_flow else 1, self.full.together)
         self.every = self.stride * max(1, max(EVERY, burst) // self.stride)
         self.centres = self.means()
-        self.stir = Stir(self.every, 0)
+        self.stir = STILL
+        self.solvers: dict[int, ClassSolver] = {}
         self.bare = self.bare_setting(0.5 * (self.upper - self.lower))
+
+    @cached_property
+    def transition(self) -> TransitionMatrix:
+        """Matrix of the density; only where its tally was kept."""
+        assert self.held.tally is not None, "only asked for with a tally"
+        return TransitionMatrix(self.held.tally)
+
+    def solver(self, regime: int) -> ClassSolver:
+        """Solver of the class of a regime, made once."""
+        if regime not in self.solvers:
+            members = self.held.regimes[regime].cell
+            if self.transition.n_cell > len(self.held.keys) and self.held.regimes[regime].mass.sum() < 1.0 - 1e-12:
+                # the outside state belongs to the class
+                members = np.append(members, len(self.held.keys))
+            self.solvers[regime] = ClassSolver(self.transition, members)
+        return self.solvers[regime]
 
     # ----------------------------------------------------------------------------------- settings
 
@@ -79,13 +101,12 @@ class Craft:
         return np.array([o.mean.value or 0.0 for o in numbers])
 
     def cut(self, duration: float) -> int:
-        """Steps of a whole record of this length; histograms are made finer where it is short."""
-        slices = max(1, round(duration / self.step / N_SLICE / self.full.together))
-        length = slices * self.full.together
-        if length < self.every:
-            self.every = length
-            self.stride = math.gcd(self.stride, length)
-        return length // self.every * self.every * N_SLICE
+        """Steps of a whole record of this length, rounded up; points are taken oftener where it is short."""
+        together = self.full.together
+        length = together * max(1, math.ceil(duration / self.step / N_SLICE / together - 1e-9))
+        self.every = min(self.every, length)
+        self.stride = min(self.stride, length)
+        return length * N_SLICE
 
     def bare_setting(self, scale: Floats) -> Bare:
         middle = np.maximum(np.abs(self.lower), np.abs(self.upper))
@@ -99,6 +120,7 @@ class Craft:
             period=self.period,
             magnitude=float(np.max(middle / scale)),
             stirred=self.stir.bits == LOSING.bits,
+            moved=self.stir.moved,
         )
 
     def setting(self) -> Setting:
@@ -143,15 +165,21 @@ class Craft:
         return advance, parameter_values(self.case, self.centres), n_sum
 
     def stirring(self) -> Stir:
-        """Whether low bits are drawn anew: of a map that brings most of many states together in a few hundred steps."""
+        """Whether low bits are drawn anew: of a map that brings many states together and yet parts neighbours."""
         if self.case.system.kind != "map":
-            return Stir(self.every, 0)
+            return STILL
         begin = self.rng.uniform(self.lower[:, None], self.upper[:, None], (len(self.lower), N_TRIED))
         # by the kernel of the bursts, which does nothing against it
-        end = BurstFlight(*self.burst_kernel, self.rng).fly(begin, 1.0, FORGETS_IN)
+        flight = BurstFlight(*self.burst_kernel, self.rng)
+        end = flight.fly(begin, 1.0, FORGETS_IN)
         end = end[:, np.isfinite(end).all(axis=0)]
-        loses = np.unique(end, axis=1).shape[1] < 0.5 * end.shape[1]
-        return LOSING if loses else Stir(LOSING.every, 0)
+        if end.shape[1] == 0 or np.unique(end, axis=1).shape[1] >= 0.5 * end.shape[1]:
+            return Stir(LOSING.every, 0, MOVED)
+        # a point or a cycle that attracts brings states together as well, and holds those that are a little off
+        off = 1e-6 * (self.upper - self.lower)[:, None] * self.rng.choice([-1.0, 1.0], end.shape)
+        after = np.abs(flight.fly(end + off, 1.0, LOSING.every) - flight.fly(end, 1.0, LOSING.every))
+        grown = np.median(np.nanmax(after / (self.upper - self.lower)[:, None], axis=0))
+        return LOSING if grown > 1e-6 else STILL
 
     def arbitrate(self, state: Floats) -> Arbiter | None:
         """Judge the time step of a flow without noise, and shorten it where the arbiter asks for that."""
@@ -160,8 +188,17 @@ class Craft:
         self.report("arbiter", 0, 1)
         pieces = state[:, :N_PIECE]
         duration = min(self.held.plan.duration, PIECE / max(self.held.plan.pilot.get("rate", 1.0), 1e-300))
+        rates, lower = right_hand_side(self.case.system), self.held.grid.lower
+        wraps = self.period > 0.0
+
+        def wrapped(state: Floats) -> Floats:
+            """The right-hand side, periodic components taken back into their period."""
+            state = state.copy()
+            state[wraps] = lower[wraps, None] + np.mod(state[wraps] - lower[wraps, None], self.period[wraps, None])
+            return rates(state)
+
         found, step = arbitrated(
-            right_hand_side(self.case.system),
+            wrapped,
             self.fly,
             pieces,
             self.bare.scale,
@@ -177,6 +214,5 @@ class Craft:
 
 def spread_of(state: Floats, width: Floats) -> Floats:
     """Standard deviation of each component over states (n_dim, n); a part of the magnitude where they stand still."""
-    least = np.maximum(1e-6 * width, 1e-3 * np.abs(state).mean(axis=1))
-    spread = state.std(axis=1)
-    return np.asarray(np.where(spread > 1e-3 * least, spread, least))
+    spread, least = state.std(axis=1), 1e-6 * width
+    return np.asarray(np.where(spread > least, spread, np.maximum(least, 1e-3 * np.abs(state).mean(axis=1))))
