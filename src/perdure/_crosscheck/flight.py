@@ -18,7 +18,7 @@ from perdure._kernels.rows import locate
 from perdure._kernels.trajectory import MOST_STEPS
 from perdure._records import BoxGrid, Floats, Integers
 
-__all__ = ["N_GROUP", "N_PART", "N_SLICE", "Flight", "Setting", "Stir", "cell_of"]
+__all__ = ["MOST_PER_CALL", "N_GROUP", "N_PART", "N_SLICE", "Flight", "Setting", "Stir", "cell_of"]
 
 # Slices of a full record, and the parts of it that histograms are kept for: the first of four is dropped.
 N_SLICE, N_PART = 32, 4
@@ -176,7 +176,8 @@ class Flight:
         counts = self.counts[part, lanes]
         total = np.zeros((setting.n_sum, state.shape[1]))
         visits = np.zeros_like(self.visits[0])
-        most = MOST_PER_CALL // setting.every * setting.every
+        # points of cells are not taken further apart than a call is long
+        most = max(MOST_PER_CALL // setting.every, 1) * setting.every
         for at in range(0, self.length, most):
             n_step = min(most, self.length - at)
             sums, samples = setting.called(state, n_step, self.rngs[block], counts, n_step // setting.every)

@@ -139,7 +139,11 @@ def distances(gap: Floats, width: Floats) -> tuple[Floats, Floats, Floats]:
     The slots beyond the ends count as one interval each, at the end. Within an interval both laws are taken as even.
     """
     below = np.cumsum(gap, axis=1)[:, :-1]
-    transport = 0.5 * (np.abs(below[:, :-1]) + np.abs(below[:, 1:])) @ width
+    left, right = np.abs(below[:, :-1]), np.abs(below[:, 1:])
+    # where the difference changes its sign within the interval, two triangles
+    crossed = below[:, :-1] * below[:, 1:] < 0.0
+    total = np.where(crossed, left + right, 1.0)
+    transport = np.where(crossed, 0.5 * (left**2 + right**2) / total, 0.5 * (left + right)) @ width
     return 0.5 * np.abs(gap).sum(axis=1), np.abs(below).max(axis=1), transport
 
 

@@ -40,10 +40,13 @@ def orthonormalise(joint, scale, period, apart, low, growth, lost):  # type: ign
             size = np.sqrt(size)
             if size > low:
                 growth[j, i] += np.log(size)
-            else:
+            elif size <= low:
                 lost[j] += 1
                 growth[j, i] += np.log(low)
                 size = fresh(v, j)
+            else:
+                # the trajectory left all bounds
+                growth[j, i] = np.nan
             for d in range(n_dim):
                 v[j, d] /= size
                 joint[d, j + 1, i] = joint[d, 0, i] + apart * scale[d] * v[j, d]

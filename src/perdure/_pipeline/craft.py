@@ -12,7 +12,7 @@ import numpy as np
 from perdure._case import Case
 from perdure._case.dynamics import right_hand_side
 from perdure._crosscheck.arbiter import arbitrated
-from perdure._crosscheck.flight import N_SLICE, Setting, Stir
+from perdure._crosscheck.flight import MOST_PER_CALL, N_SLICE, Setting, Stir
 from perdure._crosscheck.tangents import Bare
 from perdure._kernels.generate import LANES
 from perdure._pipeline.watch import Progress
@@ -33,8 +33,6 @@ MOVED = 2.0**-49
 LOSING, STILL = Stir(8, 24, MOVED), Stir(8, 0, 0.0)
 # States, and steps in which a map that loses bits brings them together.
 N_TRIED, FORGETS_IN = 256, 512
-# Steps of a call of the kernel.
-PER_CALL = 65536
 # Pieces that are given to the arbiter, and their length in times in which neighbours part by e.
 N_PIECE, PIECE = 16, 5.0
 
@@ -71,7 +69,7 @@ class Craft:
         self.burst = burst
         # states of a map forget each other in a few steps, those of a flow in a good part of a burst
         self.stride = max(STRIDE if system.is_flow else 1, self.full.together)
-        self.every = self.stride * max(1, max(EVERY, burst) // self.stride)
+        self.every = self.stride * max(1, min(max(EVERY, burst), MOST_PER_CALL) // self.stride)
         self.centres = self.means()
         self.stir = STILL
         self.solvers: dict[int, ClassSolver] = {}
@@ -144,8 +142,8 @@ class Craft:
         """States after so many steps of this length; the first that is enough for the kernel."""
         n_step = -(-n_step // self.plain.together) * self.plain.together
         joint = np.ascontiguousarray(state[:, None, :]).copy()
-        for at in range(0, n_step, PER_CALL):
-            part = min(PER_CALL, n_step - at)
+        for at in range(0, n_step, MOST_PER_CALL):
+            part = min(MOST_PER_CALL, n_step - at)
             replace(self.bare, step=step).fly(joint, part, self.rng, self.bare.no_counts(state.shape[1]))
         return joint[:, 0]
 
@@ -153,9 +151,9 @@ class Craft:
         """States after so many steps of the kernel of the trajectories."""
         setting, state = self.setting(), np.ascontiguousarray(state)
         n_step = -(-n_step // self.full.together) * self.full.together
-        for at in range(0, n_step, PER_CALL):
+        for at in range(0, n_step, MOST_PER_CALL):
             counts = setting.no_counts(state.shape[1])
-            setting.called(state, min(PER_CALL, n_step - at), self.rng, counts, 0)
+            setting.called(state, min(MOST_PER_CALL, n_step - at), self.rng, counts, 0)
         return state
 
     @property
