@@ -302,7 +302,7 @@ def bench_trajectories(repeats: int, folder: Path) -> list[Line]:
             return clocked(
                 lambda: kernel.follow(
                     state, sums, counts, samples, words, parameter_values(case), STEP, n_step, every, 256,
-                    lower, 50.0 / width, n_step + 1, np.uint64(0), 0.0,
+                    lower, 50.0 / width, np.uint64(0), 0.0,
                 )
             )  # fmt: skip
 

@@ -87,14 +87,14 @@ def follow(
     stride: int | None = None,
     every: int | None = None,
     n_sample: int | None = None,
-    low_bits: tuple[int, int] | None = None,
+    low_bits: int = 0,
     moved: float = 0.0,
     after: Followed | None = None,
 ) -> Followed:
     """Fly a kernel of `KERNELS` from state (n_dim, n), or go on `after` another flight.
 
     `axis` holds lower ends, upper ends and the number of intervals; histograms are taken every `stride` steps, samples
-    every `every`, as many as there are unless `n_sample` is given. `low_bits`: every so many steps, so many bits.
+    every `every`, as many as there are unless `n_sample` is given. `low_bits`: of the bits drawn anew.
     """
     spec, together = KERNELS[name], steps_together(KERNELS[name])
     out = np.array(state if after is None else after.state, dtype=float, order="C", ndmin=2)
@@ -108,10 +108,9 @@ def follow(
     samples = np.full((n_sample, n_dim, n), -7.0)
     words = np.arange(n, dtype=np.uint64) if stream is None else stream
     values = np.array([*list(parameters)[: len(spec.parameters)], *(centres or [0.0] * len(spec.observables))] or [0.0])
-    stir_every, bits = low_bits or (never, 0)
     lost = trajectory_kernel(spec)(
         out, sums, counts, samples, words, values, float(step), n_step, stride or never, every or never, lower,
-        n_interval / (upper - lower), stir_every, np.uint64(2**bits - 1), moved,
+        n_interval / (upper - lower), np.uint64(2**low_bits - 1), moved,
     )  # fmt: skip
     return Followed(out, sums, counts, samples, int(lost))
 
@@ -670,7 +669,7 @@ def test_a_map_that_doubles_does_not_end_at_zero() -> None:
     x = np.random.default_rng(19).uniform(0.0, 1.0, n)
     alone = follow("doubling", x, n_step=200, stream=words_of(n, 20)).state[0]
     assert np.all(alone == 0.0)
-    found = follow("doubling", x, n_step=200, stream=words_of(n, 20), low_bits=(8, 24)).state[0]
+    found = follow("doubling", x, n_step=200, stream=words_of(n, 20), low_bits=24).state[0]
     assert found.min() > 0.0
     assert found.max() < 1.0
     assert len(np.unique(found)) == n
@@ -681,7 +680,7 @@ def test_a_map_that_doubles_does_not_end_at_zero() -> None:
 def identity_from(values: np.ndarray, bits: int, seed: int) -> np.ndarray:
     """One step of the identity, and the low bits drawn anew."""
     state = np.array([values, values, np.zeros_like(values)])
-    found = follow("identity", state, n_step=1, stream=words_of(len(values), seed), low_bits=(1, bits)).state
+    found = follow("identity", state, n_step=1, stream=words_of(len(values), seed), low_bits=bits).state
     assert np.all(found[2] == 0.0), "0 has no low bits"
     return found[0]
 

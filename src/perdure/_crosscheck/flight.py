@@ -34,13 +34,12 @@ class Stir:
 
     Attributes
     ----------
-    every, bits : int
-        Low bits of the states that are drawn anew every so many steps; 0 bits: never.
+    bits : int
+        Low bits of the states that are drawn anew at every step.
     moved : float
         Largest part of the way to the middle that a step begins nearer.
     """
 
-    every: int
     bits: int
     moved: float
 
@@ -93,7 +92,7 @@ class Setting:
         scale = self.n_interval / (self.axis_upper - self.axis_lower)
         self.follow(
             state, sums, counts, samples, words, self.parameters, self.step, n_step, self.stride, self.every,
-            self.axis_lower, scale, self.stir.every, np.uint64(2**self.stir.bits - 1), self.stir.moved,
+            self.axis_lower, scale, np.uint64(2**self.stir.bits - 1), self.stir.moved,
         )  # fmt: skip
         return sums, samples
 

@@ -116,7 +116,7 @@ class Bare:
         never = n_step + 1
         self.follow(
             flat, np.zeros((0, copies * n)), counts, np.empty((0, n_dim, copies * n)), words, self.parameters,
-            self.step, n_step, never, never, self.middle - 0.5, np.ones(n_dim), never, np.uint64(0), self.moved,
+            self.step, n_step, never, never, self.middle - 0.5, np.ones(n_dim), np.uint64(0), self.moved,
         )  # fmt: skip
 
     def no_counts(self, n: int) -> Integers:

@@ -52,7 +52,7 @@ def volume_rate(
     n = len(keys)
     n_point = 2 ** int(np.clip(math.floor(math.log2(max(N_POINT / n, 1))), math.log2(FEWEST), math.log2(MOST)))
     base = qmc.Sobol(grid.n_dim, scramble=True, rng=rng).random(n_point).T
-    mean, scatter = np.empty(n), np.empty(n)
+    mean, scatter, counted = np.empty(n), np.empty(n), np.empty(n, dtype=bool)
     corner = grid.lower + grid.indices(keys) * grid.width
     some = max(1, 2**16 // n_point)
     for at in range(0, n, some):
@@ -67,8 +67,11 @@ def volume_rate(
         count = np.maximum(fine.sum(axis=1), 1)
         mean[at : at + some] = np.where(fine, rate, 0.0).sum(axis=1) / count
         gap = np.where(fine, rate - mean[at : at + some, None], 0.0)
+        counted[at : at + some] = fine.any(axis=1)
         scatter[at : at + some] = (gap**2).sum(axis=1) / count**2
-    part = mass / mass.sum()
+    # cells whose points all lead away say nothing
+    part = np.where(counted, mass, 0.0)
+    part /= part.sum()
     value = float(part @ mean)
     index = grid.indices(keys) // 2
     _, block = np.unique(index, axis=0, return_inverse=True)

@@ -190,7 +190,6 @@ def warm_trajectory(follow: Kernel, spec: KernelSpec) -> None:
         TOGETHER,
         np.zeros(d),
         np.ones(d),
-        TOGETHER,
         np.uint64(0),
         0.0,
     )

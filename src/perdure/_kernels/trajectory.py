@@ -11,8 +11,8 @@ of which a core makes fewest.
 Binary arithmetic does what a map without noise does not: a rounded state hits an unstable point and stays there (the
 logistic map goes 0.5, 1, 0), long orbits close into cycles, a map that doubles ends at 0. So a step of a map can begin
 a tiny random part of the way and of the state nearer the middle of the histograms: inwards at either end of the long
-run. Where the step ends is not touched, since a state may rest on an edge that an event asks for. And the low bits of
-maps that lose bits can be drawn anew.
+run; and with low bits drawn anew, for maps that lose bits. Where the step ends is not touched, since a state may rest
+on an edge that an event asks for.
 """
 
 from __future__ import annotations
@@ -53,17 +53,19 @@ def is_stirred(spec: KernelSpec) -> bool:
     return spec.is_map and not spec.draws
 
 
-def stir_lines(spec: KernelSpec, state: list[str]) -> list[str]:
-    """Statements that draw the low bits of the state of one lane anew."""
+def stir_lines(spec: KernelSpec) -> list[str]:
+    """Statements that move where a step of one lane begins, and draw the low bits of that anew."""
     word = ", ".join(f"{k * spec.lanes} + lane" for k in range(4))
-    lines = []
-    for row in state:
+    lines = [f"fresh = next_bits(words, {word})", "stir = moved * unit_open(fresh)"]
+    for k, s in enumerate(spec.state):
+        away = f"abs(x_{s}) if x_{s} < middle_{s} else -abs(x_{s})"
         lines += [
-            f"held = as_bits({row})",
-            f"drawn = (held & ~stirred) | (next_bits(words, {word}) & stirred)",
+            f"held = as_bits(x_{s})",
+            f"drawn = (held & ~stirred) | (mixed(fresh + np.uint64({k})) & stirred)",
             # one block of the low bits down where the draw has grown the magnitude; never through 0
             "drawn = drawn - stirred - np.uint64(1) if drawn > held else drawn",
-            f"{row} = as_float(drawn) if abs({row}) > 1e-300 else {row}",
+            f"x_{s} = as_float(drawn) if abs(x_{s}) > 1e-300 else x_{s}",
+            f"x_{s} = x_{s} + stir * (middle_{s} - x_{s} + ({away}))",
         ]
     return lines
 
@@ -73,12 +75,7 @@ def step_body(spec: KernelSpec, old: list[str], new: list[str], draws: Draws) ->
     normal, sign, uniform = draws
     n_wiener = SCHEMES[spec.scheme].random_needs(spec)[0]
     lines = [f"x_{s} = {row}" for s, row in zip(spec.state, old, strict=True)]
-    if is_stirred(spec):
-        word = ", ".join(f"{k * spec.lanes} + lane" for k in range(4))
-        lines.append(f"stir = moved * unit_open(next_bits(words, {word}))")
-        for s in spec.state:
-            away = f"abs(x_{s}) if x_{s} < middle_{s} else -abs(x_{s})"
-            lines.append(f"x_{s} = x_{s} + stir * (middle_{s} - x_{s} + ({away}))")
+    lines += stir_lines(spec) if is_stirred(spec) else []
     spare, loose = iter(normal[n_wiener:]), iter(uniform)
     lines += [f"v_{name} = {next(spare) if law == 'normal' else next(loose)}" for name, law in spec.draws]
     lines += step_lines(spec, normal[:n_wiener], sign)
@@ -122,10 +119,10 @@ def trajectory_source(spec: KernelSpec) -> str:
     - samples (n_sample, n_dim, n): filled every `every` steps in the same way, as far as it goes;
     - stream (n,) of uint64, parameters (with the centres after them), step, n_step (at most `MOST_STEPS`), stride,
       every, lower (n_dim,) and scale (n_dim,), intervals of the histogram per unit of the state;
-    - stir_every, stirred, moved: the bits of the mask `stirred` (uint64) are drawn anew every `stir_every` steps, and a
-      step of a map begins a random part, at most `moved`, nearer the middle of the histograms;
+    - stirred and moved: a step of a map begins with the bits of the mask `stirred` (uint64) drawn anew, and a random
+      part, at most `moved`, nearer the middle of the histograms;
 
-    and returns the number of trajectories that left all bounds. n_step, stride, every and stir_every are multiples of
+    and returns the number of trajectories that left all bounds. n_step, stride and every are multiples of
     `steps_together`.
     """
     lanes, n_event, n_parameter, together = spec.lanes, len(spec.events), len(spec.parameters), steps_together(spec)
@@ -148,10 +145,9 @@ def trajectory_source(spec: KernelSpec) -> str:
         load.append(f"{words[k // PACKED][0]} += np.int64({1 << FIELD * (k % PACKED)}) if {condition} else np.int64(0)")
     load += [f"{row} = 0.0" for row in sums]
     go: list[str] = []
-    stirs = stir_lines(spec, last) if is_stirred(spec) else []
-    if stirs:
+    if is_stirred(spec):
         constants += [f"middle_{s} = lower[{k}] + 0.5 * (n_slot - 2.0) / scale[{k}]" for k, s in enumerate(spec.state)]
-    if random or stirs:
+    if random or is_stirred(spec):
         constants.append(f"words = np.zeros({4 * lanes}, dtype=np.uint64)")
         load += seed_lines(spec, "stream[source]", "words")
     if random:
@@ -191,7 +187,7 @@ def trajectory_source(spec: KernelSpec) -> str:
         "",
         "@njit(cache=CACHED, **LANE_OPTIONS)",
         "def follow(state, sums, counts, samples, stream, parameters, step, n_step, stride, every, lower, scale,"
-        " stir_every, stirred, moved):",
+        " stirred, moved):",
         "    lost = 0",
         "    n_lane, n_slot = state.shape[1], counts.shape[2]",
         *indented(constants, 1),
@@ -211,15 +207,6 @@ def trajectory_source(spec: KernelSpec) -> str:
         "                for lane in range(used):",
         *(f"                    samples[taken, {k}, first + lane] = {row}" for k, row in enumerate(turned)),
         "                taken += 1",
-        *(
-            [
-                "            if at % stir_every == 0:",
-                f"                for lane in range({lanes}):",
-                *indented(stirs, 5),
-            ]
-            if stirs
-            else []
-        ),
         "        for lane in range(used):",
         *indented(store, 3),
         "    return lost",

@@ -27,12 +27,15 @@ __all__ = ["Craft", "spread_of"]
 
 # Steps between points of histograms, and the fewest between points of cells.
 STRIDE, EVERY = 32, 256
-# Low bits drawn anew of a map that loses them: 8 in as many steps, and as many more as a state near 0 has zeros ahead.
+# Low bits drawn anew, at every step, of a map that loses them: as many as it loses, up to a factor of 256, and as many
+# more as a state near 0 has zeros ahead.
 # Every step of a map begins a random part of at most `MOVED` nearer the middle, unless states are attracted.
 MOVED = 2.0**-49
-LOSING, STILL = Stir(8, 24, MOVED), Stir(8, 0, 0.0)
+LOSING, STILL = Stir(24, MOVED), Stir(0, 0.0)
 # States, and steps in which a map that loses bits brings them together.
 N_TRIED, FORGETS_IN = 256, 512
+# Steps after which a point or a cycle that attracts has pulled neighbours nearer.
+HELD_FOR = 8
 # Pieces that are given to the arbiter, and their length in times in which neighbours part by e.
 N_PIECE, PIECE = 16, 5.0
 
@@ -172,10 +175,10 @@ class Craft:
         end = flight.fly(begin, 1.0, FORGETS_IN)
         end = end[:, np.isfinite(end).all(axis=0)]
         if end.shape[1] == 0 or np.unique(end, axis=1).shape[1] >= 0.5 * end.shape[1]:
-            return Stir(LOSING.every, 0, MOVED)
+            return Stir(0, MOVED)
         # a point or a cycle that attracts brings states together as well, and holds those that are a little off
         off = 1e-6 * (self.upper - self.lower)[:, None] * self.rng.choice([-1.0, 1.0], end.shape)
-        after = np.abs(flight.fly(end + off, 1.0, LOSING.every) - flight.fly(end, 1.0, LOSING.every))
+        after = np.abs(flight.fly(end + off, 1.0, HELD_FOR) - flight.fly(end, 1.0, HELD_FOR))
         grown = np.median(np.nanmax(after / (self.upper - self.lower)[:, None], axis=0))
         return LOSING if grown > 1e-6 else STILL
 

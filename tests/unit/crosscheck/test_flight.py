@@ -40,7 +40,7 @@ def setting_of(name: str, **changes: Any) -> Setting:
         n_interval=10,
         grid=grid_of(0.0, TURN, 8, True) if name == "clock" else grid_of(-0.6, 0.6, 12),
         keys=np.array([0, 2, 3, 5, 7]),
-        stir=Stir(16, 0, 0.0),
+        stir=Stir(0, 0.0),
     )
     return replace(made, **changes)
 
