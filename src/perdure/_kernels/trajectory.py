@@ -160,9 +160,13 @@ def trajectory_source(spec: KernelSpec) -> str:
             draws = named_random_rows(spec, random[member // group], member % group)
         go += [f"for lane in range({lanes}):", *indented(step_body(spec, states[member - 1], states[member], draws), 1)]
     if words or sums:
+        # in names of their own: the compiler cannot know that the two buffers do not overlap
+        held = {row: f"held_{k}" for k, row in enumerate([*(row for word in words for row in word), *sums])}
         go.append(f"for lane in range({lanes}):")
+        go += [f"    {name} = {row}" for row, name in held.items()]
         for state in states:
-            go += indented(test_body(spec, state, words, sums), 1)
+            go += indented(test_body(spec, state, [[held[r] for r in w] for w in words], [held[r] for r in sums]), 1)
+        go += [f"    {row} = {name}" for row, name in held.items()]
     turned = [f"buf[(member * {len(spec.state)} + {k}) * {lanes} + lane]" for k in range(len(spec.state))]
     histogram = ["# in turn, since cycles would be met in one phase otherwise", f"member = (at // stride) % {together}"]
     for k, row in enumerate(turned):

@@ -26,7 +26,7 @@ from perdure._transitions import TransitionMatrix
 __all__ = ["Craft", "spread_of"]
 
 # Steps between points of histograms, and the fewest between points of cells.
-STRIDE, EVERY = 32, 256
+STRIDE, EVERY = 64, 256
 # Low bits drawn anew, at every step, of a map that loses them: as many as it loses, up to a factor of 256, and as many
 # more as a state near 0 has zeros ahead.
 # Every step of a map begins a random part of at most `MOVED` nearer the middle, unless states are attracted.
