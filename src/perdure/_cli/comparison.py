@@ -30,7 +30,7 @@ def summary_lines(found: Crosscheck, time_unit: str) -> list[str]:
     lines = [verdict_line(found), *(f"  {message}" for message in found.messages)]
     lines += [f"  {line}" for line in (_flight(found, time_unit), _starts(found))]
     for item in found.predictability:
-        lines += [f"  {line}" for line in _exponents(item, len(found.predictability), time_unit)]
+        lines += [f"  {line}" for line in _exponents(item, len(found.predictability))]
     return lines
 
 
@@ -74,7 +74,7 @@ def _starts(found: Crosscheck) -> str:
     return f"{told}{twins}; {starts.message}"
 
 
-def _exponents(item: Predictability, n_regime: int, time_unit: str) -> list[str]:
+def _exponents(item: Predictability, n_regime: int) -> list[str]:
     place = f"regime {item.regime + 1}, " if n_regime > 1 else ""
     values = ", ".join(quantity_cells(exponent)[0] for exponent in item.exponents[:6])
     more = f" and {len(item.exponents) - 6} more" if len(item.exponents) > 6 else ""
@@ -83,19 +83,18 @@ def _exponents(item: Predictability, n_regime: int, time_unit: str) -> list[str]
     lines.append(f"{place}their sum: {total}; change of volumes by the density: {density}; {item.verdict}")
     entropy, dimension = (quantity_cells(number)[0] for number in (item.entropy, item.dimension))
     lines.append(f"{place}entropy (Pesin): {entropy}; Kaplan-Yorke dimension: {dimension}")
-    lines.append(f"{place}{_growth(item.growth, time_unit)}")
+    lines.append(f"{place}{_growth(item.growth)}")
     return lines
 
 
-def _growth(growth: Growth, time_unit: str) -> str:
+def _growth(growth: Growth) -> str:
     if growth.time.value is None:
         return f"growth of errors: none timed ({growth.time.reason})"
-    unit = "" if time_unit == "1" else f" {time_unit}"
     ends = [f"{end:.3g}" for end in (growth.early, growth.late) if end is not None]
     spread = f" (5 to 95 percent: {' to '.join(ends)})" if len(ends) == 2 else ""
     return (
         f"growth of errors from {growth.begin:g} to {growth.end:g} of the distance of unrelated states: median time "
-        f"{quantity_cells(growth.time)[0]}{spread if not unit else f'{spread}'}"
+        f"{quantity_cells(growth.time)[0]}{spread}"
     )
 
 

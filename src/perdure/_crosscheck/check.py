@@ -185,13 +185,14 @@ def overall(
     verdicts = [c.verdict for c in comparisons] + [m.verdict for m in marginals]
     n_differ, n_short = verdicts.count(DISAGREES), verdicts.count(TOO_SHORT)
     second = "second regime" in starts.message
+    unmet = any(len(units) < 2 for units in evidence.units)
     if n_differ:
         messages.append(f"{n_differ} of {len(verdicts)} comparisons disagree: do not rely on these numbers")
     if volumes_differ:
         messages.append("the sum of the Lyapunov exponents disagrees with the change of volumes by the density")
     if n_differ or volumes_differ or evidence.moved.any() or second:
         verdict = DISAGREES
-    elif n_short or not starts.equal or evidence.n_gone or AGREES not in verdicts:
+    elif n_short or not starts.equal or evidence.n_gone or unmet or AGREES not in verdicts:
         verdict = TOO_SHORT
         if lengths:
             unit = evidence.case.system.time_unit
@@ -207,7 +208,7 @@ def overall(
             f"{evidence.n_gone} of {evidence.flight.n} trajectories left all bounds in flight and are not counted: "
             "the long run may not last"
         )
-    if any(len(units) < 2 for units in evidence.units):
+    if unmet:
         messages.append("fewer than two starts ended in a regime: its numbers are not compared")
     if starts.in_regime[-1] > evidence.n_gone and len(starts.in_regime) > 2:
         messages.append(f"{starts.in_regime[-1] - evidence.n_gone} trajectories ended in no regime of the density")

@@ -62,7 +62,7 @@ def spectrum(craft: Craft, evidence: Evidence, regime: int, limit: float, ends: 
         return None
     stands = evidence.flight.stands[1:]
     state = np.concatenate([stand[:, lanes] for stand in stands], axis=1)
-    start = np.tile(lanes % craft.n_start, len(stands))
+    start = np.tile(lanes % (evidence.flight.n // 2), len(stands))
     fine = np.isfinite(state).all(axis=0)
     state, start = np.ascontiguousarray(state[:, fine]), start[fine]
     if len(np.unique(start)) < FEWEST_STARTS:
