@@ -228,7 +228,7 @@ BROKEN = [
     (BURSTS + "reseed = false\nsweeps = 4\n", 9, "[bursts] sweeps",
      ["sweeps beside reseed = false", "reseed = true, or remove sweeps"]),
     # the rest
-    (FLOW + "[crosscheck]\nstarts = 1\n", 8, "[crosscheck] starts", ["found 1", "at least 2"]),
+    (FLOW + "[crosscheck]\nstarts = 1\n", 8, "[crosscheck] starts", ["found 1", "from 4 to 16384"]),
     (FLOW + "[crosscheck]\nduration = 0\n", 8, "[crosscheck] duration", ["above 0"]),
     (FLOW + "[crosscheck]\nstart = 2\n", 8, "[crosscheck] start", ["did you mean 'starts'?"]),
     ("study = 3\n" + FLOW, 1, "[study]", ["found 3", "a table"]),

@@ -41,7 +41,7 @@ TABLES: dict[str, Any] = {
     "cells": {"lower": [-1, -2], "upper": {"x": 1, "y": 2}, "counts": np.array([4, 5]), "periodic": ["x"]},
     "bursts": {"duration": 0.5, "per_cell": np.int64(16), "reseed": False},
     "output": {"matrix": False, "intervals": 10},
-    "crosscheck": {"starts": 3},
+    "crosscheck": {"starts": 8},
     "study": {"design": "sobol", "rho": {"low": 24.0, "high": 30.0, "since": datetime.date(2020, 1, 2)}},
     "title": 'ρ "quoted" \\ \t and\x7f so on'.replace("\t", "").replace("\x7f", ""),
     "seed": 2**100,
