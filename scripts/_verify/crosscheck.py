@@ -9,6 +9,7 @@ from dataclasses import replace
 import numpy as np
 
 import perdure
+from helpers.wells import SLOW_WELL, TWO_WAYS, moved
 from perdure import Case, Quantity, Result
 from perdure._records import Estimate
 from reference.cases import TABLES
@@ -102,7 +103,9 @@ def off(estimate: Estimate, rng: np.random.Generator) -> Estimate:
     ]
     table, name, number = places[int(rng.integers(len(places)))]
     rows = dict(getattr(regime, table))
-    rows[name] = replace(rows[name], **{number: moved(getattr(rows[name], number), float(rng.choice([-1.0, 1.0])))})
+    rows[name] = replace(
+        rows[name], **{number: moved(getattr(rows[name], number), OFF * float(rng.choice([-1.0, 1.0])))}
+    )
     return replace(estimate, regimes=(replace(regime, **{table: rows}), *estimate.regimes[1:]))
 
 
@@ -111,14 +114,6 @@ def movable(number: Quantity) -> bool:
     if number.value is None or number.low is None or number.high is None:
         return False
     return number.high - number.low > 2e-3 * abs(number.value)
-
-
-def moved(number: Quantity, side: float) -> Quantity:
-    assert number.value is not None, "only numbers with an interval are moved"
-    assert number.low is not None, "only numbers with an interval are moved"
-    assert number.high is not None, "only numbers with an interval are moved"
-    shift = side * OFF * 0.5 * (number.high - number.low)
-    return replace(number, value=number.value + shift, low=number.low + shift, high=number.high + shift)
 
 
 def exponents(names: tuple[str, ...], progress: Callable[[str], None]) -> bool:
@@ -144,18 +139,9 @@ def exponents(names: tuple[str, ...], progress: Callable[[str], None]) -> bool:
 
 def outcomes() -> bool:
     """Two regimes are named; a bistable run that is too short is told so, with the length that would do."""
-    pair = Case(
-        title="two ways to settle",
-        system={
-            "kind": "noisy-map",
-            "state": ["x"],
-            "equations": {"x": "x + 0.3*x*(1 - x*x) + 0.05*(e - 0.5)"},
-            "draws": {"e": "uniform"},
-        },
-        events={"high": {"when": "x > 1"}},
-    )
+    pair = Case(title="two ways to settle", **TWO_WAYS)
     two = perdure.crosscheck(perdure.estimate(pair)).crosscheck
-    slow = Case(title="slow double well", seed=3, **slow_well())
+    slow = Case(title="slow double well", seed=3, **SLOW_WELL)
     short = perdure.crosscheck(perdure.estimate(slow), duration=200.0).crosscheck
     assert two is not None
     assert short is not None
@@ -164,16 +150,3 @@ def outcomes() -> bool:
     named = len(two.predictability) == 2 and "several regimes" in two.starts.message and two.verdict != "disagrees"
     lengths = [row.length for row in short.comparisons if row.length is not None]
     return named and short.verdict == "too short to tell" and bool(lengths)
-
-
-def slow_well() -> dict[str, object]:
-    """A double well whose barrier is crossed about once in 700 time units (Kramers' rate)."""
-    return {
-        "system": {
-            "kind": "noisy-flow",
-            "state": ["x"],
-            "equations": {"x": "x - x**3 + 0.05"},
-            "noise": {"x": "0.33"},
-        },
-        "events": {"right": {"when": "x > 0"}},
-    }

@@ -12,6 +12,7 @@ import pytest
 
 import perdure
 from helpers.synthetic_estimate import assert_same, make_estimate
+from helpers.wells import SLOW_WELL, TWO_WAYS, moved
 from perdure import Case, Quantity, Result
 from perdure._records import Crosscheck
 from perdure.errors import EstimateError, UsageError
@@ -67,14 +68,9 @@ def test_nothing_else_of_the_result_changes(logistic: Result) -> None:
 
 def wrong(result: Result, name: str, half_widths: float) -> Result:
     """The result with one share moved by so many half-widths of its interval."""
-    estimate, share = result.estimate, result.events[name].share
-    assert share.value is not None
-    assert share.low is not None
-    assert share.high is not None
-    shift = 0.5 * half_widths * (share.high - share.low)
-    moved = replace(share, value=share.value + shift, low=share.low + shift, high=share.high + shift)
+    estimate, share = result.estimate, moved(result.events[name].share, half_widths)
     regime = estimate.regimes[0]
-    events = {**regime.events, name: replace(regime.events[name], share=moved)}
+    events = {**regime.events, name: replace(regime.events[name], share=share)}
     return Result(replace(estimate, regimes=(replace(regime, events=events),)))
 
 
@@ -133,17 +129,7 @@ def assert_within(number: Quantity, exact: float, part: float) -> None:
 
 
 def test_two_regimes_are_named() -> None:
-    case = Case(
-        title="two ways",
-        seed=1,
-        system={
-            "kind": "noisy-map",
-            "state": ["x"],
-            "equations": {"x": "x + 0.3*x*(1 - x*x) + 0.05*(e - 0.5)"},
-            "draws": {"e": "uniform"},
-        },
-        events={"high": {"when": "x > 1"}},
-    )
+    case = Case(title="two ways", seed=1, **TWO_WAYS)
     result = perdure.estimate(case)
     assert result.outcome == "several-regimes"
     crosscheck = found(result)
@@ -162,17 +148,7 @@ def test_two_regimes_are_named() -> None:
 
 
 def test_a_slow_well_is_too_short_and_not_a_second_regime() -> None:
-    case = Case(
-        title="slow",
-        seed=3,
-        system={
-            "kind": "noisy-flow",
-            "state": ["x"],
-            "equations": {"x": "x - x**3 + 0.05"},
-            "noise": {"x": "0.33"},
-        },
-        events={"right": {"when": "x > 0"}},
-    )
+    case = Case(title="slow", seed=3, **SLOW_WELL)
     crosscheck = found(perdure.estimate(case), duration=200.0)
     assert crosscheck.verdict == "too short to tell"
     assert not crosscheck.starts.equal
